@@ -1,0 +1,2 @@
+def request_recomputes(draft, questions):
+    return []

@@ -1,0 +1,7 @@
+"""Django's entry for the API."""
+
+from django.apps import AppConfig
+
+
+class ApiConfig(AppConfig):
+    name = "api"
