@@ -1,7 +1,7 @@
 """The one place that reads the process environment.
 
 `config.settings` and the service runner ask these functions and nothing else does, so the list of variables
-is the list of calls in those two. A value that cannot be understood stops the start with a sentence naming it.
+is the list of calls in those two. A value that makes no sense stops the start with a sentence naming it.
 """
 
 from __future__ import annotations

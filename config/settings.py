@@ -30,7 +30,7 @@ SECRET_KEY = environment.text_or_file(
     remedy="set it, or run `make demo` once to generate a local one.",
 )
 
-# Safe by default: without STEELYARD_HTTPS=0 (the local runner sets it) cookies are secure and HTTP is refused.
+# Safe by default: without STEELYARD_HTTPS=0 (set by the local runner) cookies are secure, HTTP is refused.
 SERVED_OVER_HTTPS = environment.flag("STEELYARD_HTTPS", default=True)
 # Only behind a proxy that always sets this header itself; otherwise any client could claim to use HTTPS.
 BEHIND_TRUSTED_PROXY = environment.flag("STEELYARD_TRUST_FORWARDED_PROTO", default=False)
@@ -288,7 +288,7 @@ CELERY_BROKER_TRANSPORT_OPTIONS = broker_options(CELERY_BROKER_URL)
 CELERY_BROKER_CONNECTION_RETRY_ON_STARTUP = True
 CELERY_BROKER_CONNECTION_MAX_RETRIES = None
 CELERY_BROKER_CONNECTION_TIMEOUT = 2
-# A message is only a hint, sent after commit: with the queue down the caller goes on and the sweep rings later.
+# A message is only a hint, sent after commit: with the queue down the caller goes on, the sweep rings later.
 CELERY_TASK_PUBLISH_RETRY = False
 CELERY_TASK_IGNORE_RESULT = True
 CELERY_TASK_ACKS_LATE = True
