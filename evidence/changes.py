@@ -113,13 +113,16 @@ def recording(
     subject: Mapping[str, Any],
     reason: str = "",
     at: datetime | None = None,
+    durable: bool = True,
 ) -> Iterator[Recording]:
     """One change of the register, in one transaction.
+
+    ``durable`` is switched off only where a larger operation has opened the transaction itself.
 
     ``at`` sets the recorded time of a replayed history and is refused outside invented evidence bases, where it may
     not run backwards either.
     """
-    with transaction.atomic(durable=True):
+    with transaction.atomic(durable=durable):
         # NO KEY: rows that refer to the base can still be written elsewhere; only the next number has to wait.
         base = EvidenceBase.objects.select_for_update(no_key=True).get(pk=evidence_base.pk)
         draft = Recording(base, base.last_change + 1, _recorded_time(base, at))

@@ -57,6 +57,7 @@ class Direction(TextChoices):
 
 
 class Decision(TextChoices):
+    PROPOSED = "proposed", "Proposed, not decided yet"
     IN = "in", "Eligible"
     OUT = "out", "Not eligible"
 

@@ -19,9 +19,7 @@ class EvidenceBase(models.Model):
     slug = models.SlugField(max_length=80, unique=True)
     name = models.CharField(max_length=200)
     description = models.TextField(blank=True)
-    is_invented = models.BooleanField(
-        default=False, help_text="Demonstration data: every page and export says so."
-    )
+    is_invented = models.BooleanField(default=False, help_text="Demonstration data: every page and export says so.")
     last_change = models.BigIntegerField(
         default=0, help_text="Number of the newest change; taken under this row's lock just before commit."
     )

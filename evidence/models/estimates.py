@@ -110,7 +110,10 @@ class EstimateRevision(Revision):
     column = models.CharField(max_length=60, blank=True)
     row = models.CharField(max_length=120, blank=True)
     resolution = models.ForeignKey(
-        Resolution, null=True, on_delete=models.PROTECT, related_name="+",
+        Resolution,
+        null=True,
+        on_delete=models.PROTECT,
+        related_name="+",
         help_text="The accepted record; NULL while codings await one.",
     )
 

@@ -40,7 +40,9 @@ class QuestionRevision(Revision):
     unit = models.CharField(max_length=60, blank=True, help_text="Unit of the effect where the metric has one.")
     good_direction = models.CharField(max_length=8, choices=Direction.choices)
     smallest_effect = models.DecimalField(
-        max_digits=24, decimal_places=12, null=True,
+        max_digits=24,
+        decimal_places=12,
+        null=True,
         help_text="Smallest effect worth acting on, in the metric; NULL where none was stated.",
     )
     outcome_family = models.CharField(max_length=80, blank=True, help_text="Questions read side by side share it.")
@@ -69,7 +71,7 @@ class EligibilityRevision(Revision):
 
     question = models.ForeignKey(Question, on_delete=models.PROTECT, related_name="eligibility")
     estimate = models.ForeignKey(Estimate, on_delete=models.PROTECT, related_name="eligibility")
-    decision = models.CharField(max_length=3, choices=Decision.choices)
+    decision = models.CharField(max_length=8, choices=Decision.choices)
     reason_code = models.SlugField(max_length=60, blank=True)
     reason = models.TextField(blank=True)
     decided_by = models.ForeignKey(settings.AUTH_USER_MODEL, on_delete=models.PROTECT, related_name="+")
@@ -79,7 +81,7 @@ class EligibilityRevision(Revision):
             *revision_constraints("eligibility", "question", "estimate"),
             models.CheckConstraint(condition=Q(decision__in=Decision.values), name="eligibility_decision_is_known"),
             models.CheckConstraint(
-                condition=Q(decision=Decision.IN) | Q(reason__length__gt=0), name="exclusion_has_a_reason"
+                condition=~Q(decision=Decision.OUT) | Q(reason__length__gt=0), name="exclusion_has_a_reason"
             ),
         ]
         indexes = [
