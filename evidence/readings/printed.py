@@ -103,12 +103,14 @@ def _refusal(kept: str, plain: str) -> NotPrinted:
     if plain[0] in "<>≤≥=":
         return NotPrinted(
             ErrorCode.BOUND_IN_NUMBER,
-            f"{kept!r} is a comparison. Write a bound such as 'p < 0.05' as 'p_below': \"0.05\", and an exact value alone.",
+            f"{kept!r} is a comparison. Write a bound such as 'p < 0.05' as 'p_below': \"0.05\", and an exact value "
+            "alone.",
         )
     if _COMMA.fullmatch(plain):
         return NotPrinted(
             ErrorCode.AMBIGUOUS_COMMA,
-            f"The comma in {kept!r} could mark thousands or decimals. Write a point for decimals and nothing for thousands.",
+            f"The comma in {kept!r} could mark thousands or decimals. Write a point for decimals and nothing for "
+            "thousands.",
         )
     if "%" in plain:
         return NotPrinted(

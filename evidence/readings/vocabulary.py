@@ -153,7 +153,7 @@ class ErrorCode(Explained):
         "ratio-standard-error",
         "A standard error beside a ratio may be of the ratio or of its logarithm, so it cannot be used.",
     )
-    DEGREES_OF_FREEDOM_NOT_POSITIVE = "degrees-of-freedom-not-positive", "Degrees of freedom are above zero."
+    DEGREES_OF_FREEDOM_TOO_SMALL = "degrees-of-freedom-too-small", "Degrees of freedom are at least one."
     NO_TERMS = "no-terms", "A regression reading holds at least one term of the exposure."
     TOO_MANY_TERMS = "too-many-terms", "A regression reading holds only the terms in which the exposure appears."
     TERM_REPEATED = "term-repeated", "Each form of the exposure, and each moderator, appears once."
