@@ -5,8 +5,11 @@ from __future__ import annotations
 import os
 
 from celery import Celery
+from kombu.transport import TRANSPORT_ALIASES
 
 os.environ.setdefault("DJANGO_SETTINGS_MODULE", "config.settings")
+
+TRANSPORT_ALIASES["filesystem"] = "config.file_queue:Transport"
 
 app = Celery("steelyard")
 app.config_from_object("django.conf:settings", namespace="CELERY")

@@ -102,9 +102,7 @@ def database_from_url(url: str) -> dict[str, Any]:
     Parameters of the URI that Django has no name for (`sslmode`, `target_session_attrs`, …) are handed on.
     """
     if urlsplit(url).scheme not in {"postgres", "postgresql"}:
-        raise ImproperlyConfigured(
-            "DATABASE_URL must begin with postgresql:// (no other database is supported)."
-        )
+        raise ImproperlyConfigured("DATABASE_URL must begin with postgresql:// (no other database is supported).")
     parts: dict[str, Any] = dict(conninfo_to_dict(url))
     session = (
         f"-c statement_timeout={STATEMENT_TIMEOUT_SECONDS}s"
@@ -299,6 +297,8 @@ CELERY_TASK_SOFT_TIME_LIMIT = 840
 CELERY_TASK_DEFAULT_QUEUE = "steelyard"
 CELERY_TASK_SERIALIZER = "json"
 CELERY_ACCEPT_CONTENT = ["json"]
+# The file-backed queue would keep a file for every question asked of the workers.
+CELERY_WORKER_ENABLE_REMOTE_CONTROL = not CELERY_BROKER_URL.startswith("filesystem:")
 CELERY_WORKER_PREFETCH_MULTIPLIER = 1
 CELERY_WORKER_MAX_TASKS_PER_CHILD = 200
 CELERY_WORKER_SOFT_SHUTDOWN_TIMEOUT = 20

@@ -13,9 +13,7 @@ class StartRefused(Exception):
 
 def disk_full(folder: Path) -> StartRefused:
     """The sentence for a disk with no room left."""
-    return StartRefused(
-        f"The disk holding {folder} is full: free some space there, or set STEELYARD_DATA elsewhere."
-    )
+    return StartRefused(f"The disk holding {folder} is full: free some space there, or set STEELYARD_DATA elsewhere.")
 
 
 def require_free_space(folder: Path, *, megabytes: int) -> None:

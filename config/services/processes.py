@@ -123,9 +123,12 @@ def start(
 
 @dataclass
 class Watchdog:
-    """The process that ends registered groups when this one is gone. Use as a context manager."""
+    """The process that ends registered groups when this one is gone. Use as a context manager.
 
-    log: IO[bytes] | int | None = None
+    `keep_open` is a descriptor that it holds until then, so that a lock on it outlasts a crash of ours.
+    """
+
+    keep_open: int | None = None
     _process: subprocess.Popen[bytes] | None = field(default=None, init=False)
 
     def __enter__(self) -> Watchdog:
@@ -133,7 +136,8 @@ class Watchdog:
             [sys.executable, str(Path(__file__).with_name("watchdog.py"))],
             stdin=subprocess.PIPE,
             stdout=subprocess.DEVNULL,
-            stderr=self.log if self.log is not None else subprocess.DEVNULL,
+            stderr=subprocess.DEVNULL,
+            pass_fds=[] if self.keep_open is None else [self.keep_open],
             start_new_session=True,
         )
         return self
