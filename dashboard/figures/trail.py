@@ -212,13 +212,17 @@ def trail_table(trail: Trail) -> Table:
 def clipped(trail: Trail) -> bool:
     """Whether some band is wider than the figure, so that a caption can say so."""
     low, high = _value_range(trail)
-    bounds = [
+    return any(bound < low or bound > high for bound in _bounds(trail))
+
+
+def _bounds(trail: Trail) -> list[float]:
+    """Every known end of a band."""
+    return [
         bound
         for step in trail.steps
         for bound in (step.low, step.high, step.prediction_low, step.prediction_high)
         if bound is not None
     ]
-    return any(bound < low or bound > high for bound in bounds)
 
 
 def _side(step: TrailStep, null: float) -> int:
@@ -246,7 +250,7 @@ def _value_range(trail: Trail) -> tuple[float, float]:
     core = [step.value for step in trail.steps if step.value is not None]
     core += [bound for bound in (last.low, last.high, last.prediction_low, last.prediction_high) if bound is not None]
     core.append(trail.measure.null)
-    bounds = [bound for step in trail.steps for bound in (step.low, step.high) if bound is not None]
+    bounds = _bounds(trail)
     return widened(trail.measure, covering(core, ratio=trail.measure.ratio), bounds, 0.35)
 
 
