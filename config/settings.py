@@ -247,6 +247,8 @@ SPECTACULAR_SETTINGS = {
 # --- The job queue -----------------------------------------------------------------------------------------
 
 QUEUE_FOLDER = DATA_FOLDER / "queue"
+# Two installations may share a Redis or RabbitMQ if they name their queues differently.
+QUEUE_NAME = environment.text("STEELYARD_QUEUE", "steelyard")
 CELERY_BROKER_URL = environment.text("CELERY_BROKER_URL", "filesystem://")
 
 _BROKER_OPTIONS: dict[str, dict[str, Any]] = {
@@ -259,6 +261,7 @@ _BROKER_OPTIONS: dict[str, dict[str, Any]] = {
     },
     # The visibility timeout stays above the longest task; the default restore pace would take many minutes.
     "redis": {
+        "global_keyprefix": f"{QUEUE_NAME}:",
         "visibility_timeout": 3600,
         "unacked_restore_interval": 5,
         "unacked_restore_throttle": 1,
@@ -294,7 +297,7 @@ CELERY_TASK_REJECT_ON_WORKER_LOST = True
 CELERY_TASK_RETRY_ON_WORKER_LOST = True
 CELERY_TASK_TIME_LIMIT = 900
 CELERY_TASK_SOFT_TIME_LIMIT = 840
-CELERY_TASK_DEFAULT_QUEUE = "steelyard"
+CELERY_TASK_DEFAULT_QUEUE = QUEUE_NAME
 CELERY_TASK_SERIALIZER = "json"
 CELERY_ACCEPT_CONTENT = ["json"]
 # The file-backed queue would keep a file for every question asked of the workers.

@@ -24,6 +24,8 @@ def web(*, address: str, processes: int, threads: int = 4) -> list[str]:
         *("--max-requests", "2000", "--max-requests-jitter", "200"),
         *("--timeout", "60", "--graceful-timeout", "30", "--keep-alive", "5"),
         *("--access-logfile", "-", "--error-logfile", "-"),
+        # It would stand in the home folder, shared by every web server of this account.
+        "--no-control-socket",
     ]
 
 

@@ -30,8 +30,8 @@ def prepare_folder(folder: Path) -> None:
     """Make the data folder; its files are private, but the embedded database's account may pass through it."""
     folder.mkdir(parents=True, exist_ok=True)
     folder.chmod(0o711)
-    for name in ("logs", "static"):
-        (folder / name).mkdir(exist_ok=True)
+    for name in ("logs", "queue", "static"):
+        (folder / name).mkdir(mode=0o700, exist_ok=True)
 
 
 def write_private(path: Path, text: str) -> None:
