@@ -2,6 +2,8 @@
 
 from django.db.models import TextChoices
 
+from evidence.readings.vocabulary import Metric
+
 
 class Role(TextChoices):
     READER = "reader", "Reader"
@@ -35,20 +37,8 @@ class Standing(TextChoices):
     RETRACTED = "retracted", "Retracted"
 
 
-class Metric(TextChoices):
-    LOG_RISK_RATIO = "log-risk-ratio", "Log risk ratio"
-    LOG_ODDS_RATIO = "log-odds-ratio", "Log odds ratio"
-    RISK_DIFFERENCE = "risk-difference", "Risk difference"
-    STANDARDISED_MEAN_DIFFERENCE = "standardised-mean-difference", "Standardised mean difference"
-    MEAN_DIFFERENCE = "mean-difference", "Mean difference"
-    LOG_RESPONSE_RATIO = "log-response-ratio", "Log response ratio"
-    FISHER_Z = "fisher-z", "Fisher's z"
-    CORRELATION = "correlation", "Correlation"
-    PARTIAL_CORRELATION = "partial-correlation", "Partial correlation"
-    ELASTICITY = "elasticity", "Elasticity"
-    SEMI_ELASTICITY = "semi-elasticity", "Semi-elasticity"
-    STANDARDISED_COEFFICIENT = "standardised-coefficient", "Standardised coefficient"
-    RAW_COEFFICIENT = "raw-coefficient", "Coefficient in stated units"
+# The scales on which effects are compared come with the readings, where each carries its explanation.
+METRIC_CHOICES = [(metric.value, metric.replace("-", " ").capitalize()) for metric in Metric]
 
 
 class Direction(TextChoices):

@@ -104,7 +104,7 @@ class Token(models.Model):
         ordering = ["-created_at", "id"]
         constraints = [
             models.CheckConstraint(
-                condition=Q(secret_sha256__regex=r"^[0-9a-f]{64}$"), name="token_secret_is_a_sha256"
+                condition=Q(("secret_sha256__regex", r"^[0-9a-f]{64}$")), name="token_secret_is_a_sha256"
             ),
             models.CheckConstraint(
                 condition=Q(evidence_base__isnull=False) | Q(expires_at__isnull=False),

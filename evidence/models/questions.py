@@ -5,7 +5,8 @@ from django.db import models
 from django.db.models import Q
 
 from evidence.identifiers import new_id
-from evidence.vocabularies import Decision, Direction, Metric
+from evidence.readings.vocabulary import Metric
+from evidence.vocabularies import METRIC_CHOICES, Decision, Direction
 
 from .estimates import Estimate
 from .revisions import Revision, revision_constraints, revision_indexes
@@ -36,7 +37,7 @@ class QuestionRevision(Revision):
     comparison = models.CharField(max_length=200, blank=True)
     outcome = models.CharField(max_length=200, help_text="As it stands in a sentence: farm-gate revenue.")
     population = models.CharField(max_length=200, blank=True)
-    metric = models.CharField(max_length=40, choices=Metric.choices)
+    metric = models.CharField(max_length=40, choices=METRIC_CHOICES)
     unit = models.CharField(max_length=60, blank=True, help_text="Unit of the effect where the metric has one.")
     good_direction = models.CharField(max_length=8, choices=Direction.choices)
     smallest_effect = models.DecimalField(
@@ -51,7 +52,9 @@ class QuestionRevision(Revision):
         constraints = [
             *revision_constraints("question", "question"),
             models.CheckConstraint(condition=Q(title__length__gt=0), name="question_has_a_title"),
-            models.CheckConstraint(condition=Q(metric__in=Metric.values), name="question_metric_is_known"),
+            models.CheckConstraint(
+                condition=Q(metric__in=[metric.value for metric in Metric]), name="question_metric_is_known"
+            ),
             models.CheckConstraint(
                 condition=Q(good_direction__in=Direction.values), name="question_direction_is_known"
             ),

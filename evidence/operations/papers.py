@@ -7,6 +7,8 @@ from datetime import date, datetime
 from typing import Any
 from uuid import UUID
 
+from django.utils import timezone
+
 from evidence.changes import Recording, recording
 from evidence.errors import Conflict, FieldProblem, Invalid
 from evidence.identifiers import new_id
@@ -182,7 +184,7 @@ def change_standing(
     back_to_current = standing == Standing.CURRENT
     if not back_to_current and on is None:
         raise Invalid.field("/on", "missing", "Say on which day the standing changed.")
-    if not back_to_current and on is not None and on > date.today():
+    if not back_to_current and on is not None and on > timezone.now().date():
         raise Invalid.field("/on", "in-the-future", "A standing cannot change on a day that has not come.")
     current = current_paper(access.evidence_base, paper_id)
     verb = Verb.PAPER_RETRACTED if standing == Standing.RETRACTED else Verb.PAPER_REVISED

@@ -12,7 +12,8 @@ from evidence.errors import Conflict, FieldProblem, Invalid
 from evidence.models import Question, QuestionRevision
 from evidence.policy import Access, Action
 from evidence.queries.questions import current_question
-from evidence.vocabularies import Direction, Metric, Verb
+from evidence.readings.vocabulary import Metric
+from evidence.vocabularies import Direction, Verb
 
 from .bases import check_slug
 from .revising import check_seen, only_changed
@@ -38,8 +39,8 @@ class QuestionFacts:
             for name in ("title", "intervention", "outcome")
             if not getattr(self, name).strip()
         ]
-        if self.metric not in Metric.values:
-            found.append(FieldProblem("/metric", "unknown-metric", f"A metric is one of {', '.join(Metric.values)}."))
+        if self.metric not in tuple(Metric):
+            found.append(FieldProblem("/metric", "unknown-metric", f"A metric is one of {', '.join(Metric)}."))
         if self.good_direction not in Direction.values:
             found.append(FieldProblem("/good_direction", "unknown-direction", "Which is better: higher or lower?"))
         if self.smallest_effect is not None and not (self.smallest_effect.is_finite() and self.smallest_effect > 0):

@@ -15,9 +15,9 @@ from django.utils import timezone
 
 from evidence.changes import Actor, recording
 from evidence.errors import Invalid, NotHere, NotSignedIn
-from evidence.models import Membership, Person, Token
+from evidence.models import Person, Token
 from evidence.policy import Access, Action, scopes_within
-from evidence.vocabularies import Role, Scope, Verb
+from evidence.vocabularies import Scope, Verb
 
 SIGN_IN_TOKEN_LIFETIME = timedelta(hours=12)
 LAST_USE_RESOLUTION = timedelta(minutes=1)
@@ -129,8 +129,3 @@ def _make(person: Person, **fields: object) -> IssuedToken:
     secret = secrets.token_urlsafe(32)
     token = Token.objects.create(owner=person, prefix=prefix, secret_sha256=_digest(secret), **fields)
     return IssuedToken(token, f"{prefix}.{secret}")
-
-
-def highest_role_scopes(membership: Membership) -> list[str]:
-    """Every scope that means something for a member; what ``manage.py issue_token`` grants by default."""
-    return sorted(scopes_within(Role(membership.role)))
