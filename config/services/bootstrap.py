@@ -33,7 +33,7 @@ KNOWN_FAILURES = (
         f"The disk holding {PROJECT} is full: free about {INSTALL_MEGABYTES} MB and run the command again.",
     ),
     (
-        r"([\w.-]+?)(?:[=@ ]+\S+)? has no (?:usable )?wheels|No matching distribution found for ([\w.-]+)",
+        r"([\w.-]+)(?:==\S+)? has no (?:usable )?wheels|No matching distribution found for ([\w.-]+)",
         "The package {0} is not available ready-made for this system and Python, and building it here would need a"
         " compiler: use Python {wanted} on 64-bit Linux or macOS.",
     ),

@@ -11,7 +11,7 @@ from collections.abc import Mapping
 from config import environment
 
 # The task worker finishes what it is doing for this long after being asked to stop, then puts it back.
-WORKER_STOP_SECONDS = 25.0
+WORKER_STOP_SECONDS = 30.0
 WEB_STOP_SECONDS = 35.0
 
 
