@@ -19,10 +19,13 @@ def labelled_ticks(measure: Measure, scale: ValueScale, about: int = 5) -> list[
     """Round values within the scale and their labels: differences with equal decimals, ratios as short as can be."""
     if measure.ratio:
         ticks = ratio_ticks(scale.low, scale.high, about)
-        return [(tick, replace(measure, decimals=tick_decimals([tick])).write(tick)) for tick in ticks]
+        return [
+            (tick, replace(measure, decimals=tick_decimals([measure.shown(tick)])).write_compact(tick))
+            for tick in ticks
+        ]
     ticks = number_ticks(scale.low, scale.high, about)
     written = replace(measure, decimals=tick_decimals(ticks))
-    return [(tick, written.write(tick)) for tick in ticks]
+    return [(tick, written.write_compact(tick)) for tick in ticks]
 
 
 def widened(measure: Measure, core: tuple[float, float], bounds: Iterable[float], share: float) -> tuple[float, float]:

@@ -133,7 +133,7 @@ def forest_figure(forest: Forest, *, ident: str, narrow: bool = False, note: str
     return document(
         _axis(forest, sheet, across, foot) + "".join(drawn),
         width=sheet.width,
-        height=foot + 24,
+        height=foot + (40 if forest.measure.unit_apart else 24),
         ident=ident,
         title=forest.title,
         description=forest_sentence(forest),
@@ -160,7 +160,7 @@ def forest_sentence(forest: Forest) -> str:
         counted += f" of {forest.total}"
     least = min(row.value for row in forest.rows)
     most = max(row.value for row in forest.rows)
-    null = measure.write_bare(measure.null) if measure.ratio else "zero"
+    null = measure.null_in_words
     including = sum(row.low <= measure.null <= row.high for row in forest.rows)
     if len(forest.rows) == 1:
         found = f"the estimate is {measure.write(least)}"
@@ -191,20 +191,21 @@ def forest_table(forest: Forest) -> Table:
     )
     rows: list[tuple[Cell, ...]] = []
     written: list[tuple[str, ...]] = []
+
+    def add(paper: str, place: str, numbers: tuple[float | None, ...], weight: float | None, remarks: str) -> None:
+        shown = [None if number is None else measure.shown(number) for number in numbers]
+        texts = ["" if number is None else measure.write_bare(number) for number in numbers]
+        share = "" if weight is None else write_number(weight * 100, 1)
+        rows.append((paper, place, *shown, weight, remarks))
+        written.append((paper, place, *texts, share, remarks))
+
     for row in forest.rows:
-        remarks = "; ".join(row.flags)
-        rows.append((row.paper, row.place, row.value, row.low, row.high, row.weight, remarks))
-        numbers = [measure.write_bare(value) for value in (row.value, row.low, row.high)]
-        written.append((row.paper, row.place, *numbers, write_number(row.weight * 100, 1), remarks))
+        add(row.paper, row.place, (row.value, row.low, row.high), row.weight, "; ".join(row.flags))
     if forest.pooled is not None:
         pooled = forest.pooled
-        rows.append(("Pooled effect", "", pooled.value, pooled.low, pooled.high, None, ""))
-        numbers = [measure.write_bare(value) for value in (pooled.value, pooled.low, pooled.high)]
-        written.append(("Pooled effect", "", *numbers, "", ""))
+        add("Pooled effect", "", (pooled.value, pooled.low, pooled.high), None, "")
         if pooled.prediction_low is not None and pooled.prediction_high is not None:
-            rows.append(("One new setting", "", None, pooled.prediction_low, pooled.prediction_high, None, ""))
-            bounds = [measure.write_bare(value) for value in (pooled.prediction_low, pooled.prediction_high)]
-            written.append(("One new setting", "", "", *bounds, "", ""))
+            add("One new setting", "", (None, pooled.prediction_low, pooled.prediction_high), None, "")
     return Table(forest.title, columns, tuple(rows), tuple(written))
 
 
@@ -256,6 +257,8 @@ def _axis(forest: Forest, sheet: _Sheet, across: ValueScale, foot: float) -> str
         if abs(tick - measure.null) > 1e-12:
             parts.append(element("line", x1=x, x2=x, y1=4, y2=foot, class_="grid"))
         parts.append(element("text", plain(label), x=x, y=foot + 17, class_="axis", text_anchor="middle"))
+    if measure.unit_apart:
+        parts.append(element("text", plain(measure.unit), x=sheet.end, y=foot + 34, class_="axis", text_anchor="end"))
     null = across.at(measure.null)
     parts.append(element("line", x1=null, x2=null, y1=4, y2=foot, class_="null"))
     if forest.pooled is not None:

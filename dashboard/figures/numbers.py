@@ -59,7 +59,8 @@ class Measure:
 
     name: the outcome in words, for titles. unit: "%" or a word, or "" when the metric has none.
     null: the value that means "no difference": 0, or 1 for ratios. ratio: true for risk and odds ratios, which are
-    drawn on a logarithmic axis and written without a sign.
+    drawn on a logarithmic axis. as_change: a ratio is written as the percentage by which it differs from 1, as the
+    sentence of the answer does ("+24.0 %" for 1.24).
     """
 
     name: str
@@ -67,22 +68,47 @@ class Measure:
     decimals: int = 2
     null: float = 0.0
     ratio: bool = False
+    as_change: bool = False
 
     def __post_init__(self) -> None:
         if self.ratio and self.null <= 0:
             raise ValueError("The null value of a ratio is positive, usually 1.")
+        if self.as_change and not (self.ratio and self.null == 1):
+            raise ValueError("Only a ratio compared with 1 can be written as a change.")
 
     @property
     def suffix(self) -> str:
         return NO_BREAK_SPACE + self.unit if self.unit else ""
 
+    @property
+    def signed(self) -> bool:
+        """Whether positive numbers carry a plus: differences and changes do, ratios do not."""
+        return not self.ratio or self.as_change
+
+    @property
+    def null_in_words(self) -> str:
+        return "zero" if self.signed else self.write_bare(self.null)
+
+    def shown(self, value: float) -> float:
+        """The number that is written for a value of the figure."""
+        return (value - 1) * 100 if self.as_change else value
+
     def write(self, value: float) -> str:
-        """One value with its unit: "+4.3 %"; a ratio has no sign: "1.24"."""
-        return write_number(value, self.decimals, signed=not self.ratio) + self.suffix
+        """One value with its unit: "+4.3 %"; a plain ratio has no sign: "1.24"."""
+        return write_number(self.shown(value), self.decimals, signed=self.signed) + self.suffix
+
+    @property
+    def unit_apart(self) -> str:
+        """A unit too long to stand beside every number of an axis; a figure says it once."""
+        return self.unit if len(self.unit) > 2 else ""
+
+    def write_compact(self, value: float) -> str:
+        """One value for an axis or a label: with its unit only where that is as short as "%"."""
+        return self.write(value).removesuffix(self.suffix) + ("" if self.unit_apart else self.suffix)
 
     def write_bare(self, value: float) -> str:
         """One value for a place where the unit already stands: "4.3", "−3.1"."""
-        return write_number(value, self.decimals)
+        return write_number(self.shown(value), self.decimals)
 
     def write_interval(self, low: float, high: float) -> str:
         return f"{self.write_bare(low)} to {self.write_bare(high)}"

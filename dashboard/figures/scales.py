@@ -94,7 +94,7 @@ def number_ticks(low: float, high: float, about: int = 5) -> tuple[float, ...]:
 def ratio_ticks(low: float, high: float, about: int = 5) -> tuple[float, ...]:
     """Ticks for a logarithmic axis: 1, 2, 5 times powers of ten; powers alone when those are too many.
 
-    An axis shorter than a factor of two and a half may hold no such number but one; it gets evenly spaced numbers.
+    An axis that holds fewer than three such numbers gets evenly spaced ones.
     """
     if not 0 < low < high:
         raise ValueError("Ratio ticks need positive ends, the lower below the upper.")
@@ -106,7 +106,7 @@ def ratio_ticks(low: float, high: float, about: int = 5) -> tuple[float, ...]:
             for factor in factors
             if low * (1 - 1e-9) <= factor * 10.0**power <= high * (1 + 1e-9)
         )
-        if 2 <= len(ticks) <= about + 2:
+        if 3 <= len(ticks) <= about + 2:
             return ticks
     if len(ticks) > about:
         return ticks[:: math.ceil(len(ticks) / about)]

@@ -14,7 +14,7 @@ from itertools import pairwise
 from dashboard.figures.axes import ValueScale, labelled_ticks, value_scale, widened
 from dashboard.figures.numbers import Measure, write_count, write_date
 from dashboard.figures.scales import LinearScale, covering, date_ticks
-from dashboard.figures.svg import document, element, plain, points
+from dashboard.figures.svg import document, element, plain, points, shorten
 from dashboard.figures.tables import Cell, Column, Table
 
 
@@ -100,8 +100,11 @@ _TICK_HEIGHT = 14.0
 def trail_figure(trail: Trail, *, ident: str, narrow: bool = False, note: str = "") -> str:
     """The whole figure as SVG text; `narrow` is the layout for a phone. `ident` keeps ids on a page apart."""
     sheet = _NARROW if narrow else _WIDE
-    across = _time_scale(trail, sheet)
     up = value_scale(trail.measure, _value_range(trail), sheet.bottom, sheet.top)
+    # The labels of the axis need their room whatever the size of the numbers.
+    longest = max(len(label) for _, label in labelled_ticks(trail.measure, up))
+    sheet = replace(sheet, left=max(sheet.left, 7.2 * longest + 12))
+    across = _time_scale(trail, sheet)
     parts = [
         _value_axis(trail, sheet, up),
         _time_axis(trail, sheet, across),
@@ -164,7 +167,7 @@ def trail_sentence(trail: Trail) -> str:
     if len(answered) == 1:
         return f"{stands}; this is its first value, from {write_date(last.on)}."
     first = answered[0]
-    null = measure.write_bare(measure.null) if measure.ratio else "zero"
+    null = measure.null_in_words
     side = _side(last, measure.null)
     if side == 0:
         verdict = f"its interval includes {null}"
@@ -200,7 +203,8 @@ def trail_table(trail: Trail) -> Table:
     for step in trail.steps:
         numbers = (step.value, step.low, step.high, step.prediction_low, step.prediction_high)
         names = "; ".join(paper.label for paper in step.papers)
-        rows.append((step.on.isoformat(), names, step.n_papers, step.n_estimates, *numbers))
+        shown = [None if number is None else measure.shown(number) for number in numbers]
+        rows.append((step.on.isoformat(), names, step.n_papers, step.n_estimates, *shown))
         texts = ["not given" if number is None else measure.write_bare(number) for number in numbers]
         if step.value is None and step.reason:
             texts[0] = step.reason
@@ -354,18 +358,23 @@ def _end(trail: Trail, sheet: _Sheet, across: LinearScale, up: ValueScale) -> st
         return ""
     x, y = across.at(trail.until.toordinal()), up.at(last.value)
     parts = [element("circle", cx=x, cy=y, r=4, class_="dot")]
-    value = plain(trail.measure.write(last.value))
+    value = plain(trail.measure.write_compact(last.value))
     interval = (
         plain(trail.measure.write_interval(last.low, last.high))
         if last.low is not None and last.high is not None
         else ""
     )
+    apart = trail.measure.unit_apart
     if sheet.end_label:
+        if apart:
+            unit = plain(shorten(apart, sheet.width - sheet.right - 10, 12))
+            parts.append(element("text", unit, x=sheet.right + 10, y=y + 37, class_="axis"))
         parts.append(element("text", value, x=sheet.right + 10, y=y + 5, class_="now"))
         if interval:
             parts.append(element("text", interval, x=sheet.right + 10, y=y + 21, class_="axis"))
     else:
-        shown = element("tspan", value, class_="now") + (element("tspan", " " + interval) if interval else "")
+        rest = " ".join(part for part in (interval, plain(apart)) if part)
+        shown = element("tspan", value, class_="now") + (element("tspan", " " + rest) if rest else "")
         parts.append(element("text", shown, x=sheet.right, y=16, class_="axis", text_anchor="end"))
     return "".join(parts)
 

@@ -1,0 +1,1 @@
+"""One module a subject; `urls.py` says which address leads where."""
