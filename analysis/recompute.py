@@ -17,6 +17,7 @@ from datetime import timedelta
 from typing import Any
 from uuid import UUID, uuid4
 
+from django.conf import settings
 from django.db import connection, transaction
 from django.db.models import F, Q, QuerySet
 from django.utils import timezone
@@ -33,7 +34,6 @@ from evidence.policy import Access, Action
 
 log = logging.getLogger(__name__)
 
-LEASE = timedelta(seconds=120)
 FIRST_RING_AFTER = timedelta(seconds=10)
 LONGEST_RING_AFTER = timedelta(minutes=5)
 MOST_ATTEMPTS = 4
@@ -153,8 +153,8 @@ def _claim(request_id: int, claim: UUID) -> RecomputeRequest | None:
         state=State.RUNNING,
         claim=claim,
         attempts=F("attempts") + 1,
-        lease_until=now + LEASE,
-        ring_after=now + LEASE,
+        lease_until=now + _lease(),
+        ring_after=now + _lease(),
         started_at=now,
         phase="",
         progress_done=0,
@@ -165,9 +165,13 @@ def _claim(request_id: int, claim: UUID) -> RecomputeRequest | None:
     return RecomputeRequest.objects.select_related("evidence_base", "question").get(pk=request_id)
 
 
+def _lease() -> timedelta:
+    return timedelta(seconds=settings.RECOMPUTE_LEASE_SECONDS)
+
+
 def _hold(request_id: int, claim: UUID, **fields: Any) -> None:
     """Extend the lease, or learn that it is lost."""
-    until = timezone.now() + LEASE
+    until = timezone.now() + _lease()
     held = RecomputeRequest.objects.filter(pk=request_id, claim=claim, state=State.RUNNING).update(
         lease_until=until, ring_after=until, **fields
     )

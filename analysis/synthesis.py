@@ -150,10 +150,10 @@ def _flags(frame: Frame, pooled: PooledEffect | NotEstimable) -> list[dict[str, 
         bounded = [row for row in rows if row.is_bounded]
         if bounded:
             add("standard-errors-bounded", len(bounded), range_of_answer=_range_of_answer(frame, pooled))
-    approximate = sum(APPROXIMATE in row.flags for row in rows)
+    approximate = sum(Flag.APPROXIMATE_STANDARD_ERROR in row.flags for row in rows)
     if approximate:
         add("standard-errors-approximate", approximate)
-    corrected = sum(CELLS_CORRECTED in row.flags for row in rows)
+    corrected = sum(Flag.CELLS_CORRECTED in row.flags for row in rows)
     if corrected:
         add("cells-corrected", corrected)
     left_out = len(frame.rows) - len(rows)

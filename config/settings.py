@@ -310,6 +310,8 @@ CELERY_TIMEZONE = "UTC"
 CELERY_BEAT_SCHEDULE_FILENAME = str(DATA_FOLDER / "schedule")
 
 SWEEP_INTERVAL_SECONDS = environment.whole_number("STEELYARD_SWEEP_INTERVAL_SECONDS", default=5, minimum=1)
+# A worker that has not been heard of for so long is given up, and its request offered to another.
+RECOMPUTE_LEASE_SECONDS = environment.whole_number("STEELYARD_LEASE_SECONDS", default=120, minimum=1)
 CELERY_BEAT_SCHEDULE = {
     "sweep": {
         "task": "analysis.tasks.sweep",

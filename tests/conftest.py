@@ -22,6 +22,8 @@ from pathlib import Path
 
 import django
 import pytest
+import pytest_django
+from django.db import connection
 
 from config.services.postgresql import DISPOSABLE, EmbeddedPostgreSQL
 
@@ -120,6 +122,17 @@ def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item
 
 
 @pytest.fixture(scope="session")
+def django_db_setup(django_db_setup: None, django_db_blocker: pytest_django.DjangoDbBlocker) -> None:
+    """The test database, told to allow what a real one refuses: emptying whole tables between tests."""
+    with django_db_blocker.unblock():
+        with connection.cursor() as cursor:
+            name = connection.ops.quote_name(connection.settings_dict["NAME"])
+            cursor.execute(f"ALTER DATABASE {name} SET steelyard.allow_truncate = 'on'")
+        # The setting holds for connections made from now on.
+        connection.close()
+
+
+@pytest.fixture(scope="session")
 def chromium() -> str:
     """The path of Chromium, for tests marked `browser`."""
     path = chromium_path()
@@ -137,3 +150,9 @@ def redis_url() -> str:
 def rabbitmq_url() -> str:
     """The RabbitMQ named for tests, for tests marked `rabbitmq`."""
     return os.environ["STEELYARD_TEST_RABBITMQ_URL"]
+
+
+@pytest.fixture
+def postgres_url() -> str:
+    """The PostgreSQL named for tests, for tests marked `postgres`."""
+    return os.environ["STEELYARD_TEST_DATABASE_URL"]

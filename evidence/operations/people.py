@@ -50,7 +50,8 @@ def sign_in(*, email: str, password: str, address: str) -> Person:
     Repeated failures, by e-mail or by network address, are refused for a quarter of an hour without looking at the
     password. An unknown e-mail takes as long as a wrong password.
     """
-    email = email.strip().lower()[:254]
+    # PostgreSQL text cannot hold NUL, and no address contains one.
+    email = email.strip().lower()[:254].replace("\0", "")
     address = address[:64]
     now = timezone.now()
     recent = SignInFailure.objects.filter(failed_at__gt=now - FAILURE_WINDOW)

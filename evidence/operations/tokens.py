@@ -6,6 +6,7 @@ safety.
 
 import hashlib
 import hmac
+import re
 import secrets
 from collections.abc import Collection
 from dataclasses import dataclass
@@ -20,6 +21,7 @@ from evidence.policy import Access, Action, scopes_within
 from evidence.vocabularies import Scope, Verb
 
 SIGN_IN_TOKEN_LIFETIME = timedelta(hours=12)
+TOKEN_TEXT = re.compile(r"(sy_[0-9a-f]{10})\.([A-Za-z0-9_-]{43})", re.ASCII)
 LAST_USE_RESOLUTION = timedelta(minutes=1)
 
 
@@ -97,12 +99,9 @@ def authenticate(text: str) -> Actor:
 
     Unknown, revoked, expired, of an inactive person and of someone who has left the evidence base all answer alike.
     """
-    prefix, dot, secret = text.partition(".")
-    token = (
-        Token.objects.select_related("owner", "evidence_base").filter(prefix=prefix).first()
-        if dot and len(text) <= MOST_CHARACTERS
-        else None
-    )
+    shaped = TOKEN_TEXT.fullmatch(text)
+    prefix, secret = shaped.groups() if shaped is not None else ("", "")
+    token = Token.objects.select_related("owner", "evidence_base").filter(prefix=prefix).first() if shaped else None
     now = timezone.now()
     if (
         token is None
@@ -115,9 +114,6 @@ def authenticate(text: str) -> Actor:
     if token.last_used_at is None or now - token.last_used_at > LAST_USE_RESOLUTION:
         Token.objects.filter(pk=token.pk).update(last_used_at=now)
     return Actor(token.owner, token)
-
-
-MOST_CHARACTERS = 200
 
 
 def _digest(secret: str) -> str:

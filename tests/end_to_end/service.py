@@ -99,11 +99,12 @@ class RunningService:
             with error:
                 return HttpAnswer(error.code, error.headers, error.read())
 
-    def manage(self, *arguments: str, extra: Mapping[str, str] | None = None) -> str:
+    def manage(self, *arguments: str, stdin: str = "", extra: Mapping[str, str] | None = None) -> str:
         """Run a management command in the service's environment and return what it printed."""
         completed = subprocess.run(
             commands.manage(*arguments),
             env=self.environment | dict(extra or {}),
+            input=stdin,
             capture_output=True,
             text=True,
             check=False,
