@@ -228,10 +228,14 @@ REST_FRAMEWORK = {
     # Nothing is open by omission: a view without its own permission classes answers nobody.
     "DEFAULT_PERMISSION_CLASSES": ["api.permissions.DenyAll"],
     "DEFAULT_RENDERER_CLASSES": ["rest_framework.renderers.JSONRenderer"],
-    "DEFAULT_PARSER_CLASSES": ["rest_framework.parsers.JSONParser"],
+    "DEFAULT_PARSER_CLASSES": ["api.parsers.BoundedJSONParser"],
     "DEFAULT_SCHEMA_CLASS": "drf_spectacular.openapi.AutoSchema",
+    "DEFAULT_METADATA_CLASS": None,
     "EXCEPTION_HANDLER": "api.problems.exception_handler",
     "UNAUTHENTICATED_USER": "django.contrib.auth.models.AnonymousUser",
+    "URL_FORMAT_OVERRIDE": None,
+    # NaN and infinities are not JSON: a number that is not finite must fail here rather than at a client.
+    "STRICT_JSON": True,
     "TEST_REQUEST_DEFAULT_FORMAT": "json",
 }
 SPECTACULAR_SETTINGS = {
@@ -242,6 +246,13 @@ SPECTACULAR_SETTINGS = {
     "SERVE_INCLUDE_SCHEMA": False,
     "SCHEMA_PATH_PREFIX": r"/api/v1",
     "COMPONENT_SPLIT_REQUEST": True,
+    # What a PATCH takes has shapes of its own, in which nothing is required.
+    "COMPONENT_SPLIT_PATCH": False,
+    "ENUM_GENERATE_CHOICE_DESCRIPTION": False,
+    "POSTPROCESSING_HOOKS": [
+        "drf_spectacular.hooks.postprocess_schema_enums",
+        "api.schema.complete",
+    ],
 }
 
 # --- The job queue -----------------------------------------------------------------------------------------

@@ -7,16 +7,20 @@ from importlib.util import find_spec
 from django.contrib import admin
 from django.urls import include, path
 
+from api.views import problems
 from config import health
 
 urlpatterns = [
     path("health/live", health.live, name="health-live"),
     path("health/ready", health.ready, name="health-ready"),
     path("admin/", admin.site.urls),
+    path("api/v1/", include("api.urls")),
+    path("problems/", problems.codes, name="problems"),
+    path("problems/<slug:name>/", problems.code, name="problem"),
+    # The address as it stands in a problem's type.
+    path("problems/<slug:name>", problems.code),
 ]
-# Until each of the two packages has its addresses.
-if find_spec("api.urls"):
-    urlpatterns.append(path("api/v1/", include("api.urls")))
+# Until the package has its addresses.
 if find_spec("dashboard.urls"):
     urlpatterns.append(path("", include("dashboard.urls")))
 

@@ -32,6 +32,14 @@ KNOWN_FAILURES = (
         r"No space left on device|Disk quota exceeded",
         f"The disk holding {PROJECT} is full: free about {INSTALL_MEGABYTES} MB and run the command again.",
     ),
+    # Before the next one: pip says that it found no distribution when it found no index.
+    (
+        r"error sending request|client error|dns error|tcp connect|timed out|Connection (?:refused|reset)|"
+        r"invalid peer certificate|CERTIFICATE_VERIFY_FAILED|Temporary failure in name resolution|"
+        r"NewConnectionError|ProxyError|Max retries exceeded|Failed to fetch",
+        "The package index could not be reached: check this machine's network connection and proxy settings and run"
+        " the command again.",
+    ),
     (
         r"([\w.-]+)(?:==\S+)? has no (?:usable )?wheels|No matching distribution found for ([\w.-]+)",
         "The package {0} is not available ready-made for this system and Python, and building it here would need a"
@@ -46,12 +54,6 @@ KNOWN_FAILURES = (
         r"[Hh]ash(?:es)? mismatch|DO NOT MATCH THE HASHES",
         "A downloaded package is not the one named in the lock file: nothing was installed; check the package index"
         " this machine is set up to use.",
-    ),
-    (
-        r"error sending request|client error|dns error|tcp connect|timed out|Connection (?:refused|reset)|"
-        r"certificate|Temporary failure in name resolution|NewConnectionError|Max retries exceeded|Failed to fetch",
-        "The package index could not be reached: check this machine's network connection and proxy settings and run"
-        " the command again.",
     ),
 )
 
@@ -198,7 +200,7 @@ def make_environment(uv: Path, python: str | None, settings: dict[str, str]) -> 
 def install(requirements: Path) -> None:
     """Bring the environment up to the lock file, unless it is there already."""
     stamp = ENVIRONMENT / f".installed-{requirements.stem}-{fingerprint(requirements)}"
-    if stamp.exists() and ENVIRONMENT_PYTHON.exists():
+    if stamp.exists() and os.access(str(ENVIRONMENT_PYTHON), os.X_OK):
         return
     free_megabytes = shutil.disk_usage(str(PROJECT)).free // 1000000
     if free_megabytes < INSTALL_MEGABYTES:

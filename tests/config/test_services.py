@@ -284,7 +284,7 @@ def test_a_full_disk_is_told_as_such_and_other_errors_are_left_alone(tmp_path: P
     refuse_when_disk_is_full(OSError(errno.EACCES, "Permission denied"), tmp_path)
 
 
-# Printed by uv 0.13 (first four) and by pip 26, shortened to the lines that matter.
+# Printed by uv 0.13 and pip 26 (those in capitals), shortened to the lines that matter.
 TOOL_MESSAGES = [
     (
         "error: Request failed after 3 retries in 6.9s\n"
@@ -300,6 +300,12 @@ TOOL_MESSAGES = [
     (
         "  x Failed to build `docopt==0.6.2`\n  error: command 'gcc' failed: No such file or directory\n",
         "The package docopt could not be built because this machine has no working compiler",
+    ),
+    (
+        "WARNING: Retrying (Retry(total=4)) after connection broken by 'NewConnectionError': /simple/uv/\n"
+        "ERROR: Could not find a version that satisfies the requirement uv==0.13.9 (from versions: none)\n"
+        "ERROR: No matching distribution found for uv==0.13.9\n",
+        "The package index could not be reached",
     ),
     ("error: failed to write to file: No space left on device (os error 28)\n", "is full: free about 1500 MB"),
     (
