@@ -160,8 +160,8 @@ class Flag(Explained):
         "standard-error-bounded",
         "The printed numbers leave the standard error open between two bounds; the protocol's choice is used.",
     )
-    COVARIANCES_TAKEN_AS_ZERO = (
-        "covariances-taken-as-zero",
+    APPROXIMATE_STANDARD_ERROR = (
+        "approximate-standard-error",
         "Covariances that are not printed are taken as zero, so the standard error is approximate.",
     )
     COVARIANCES_ROUNDED_TO_FIT = (
@@ -176,6 +176,10 @@ class Flag(Explained):
         "standard-error-from-printed-marginal-effect",
         "The standard error is that of the marginal effect printed in the paper, at the same point.",
     )
+    MARGINAL_EFFECT_AS_PRINTED = (
+        "marginal-effect-as-printed",
+        "The point of evaluation is not printed, so the marginal effect that the paper prints at its means is used.",
+    )
     MARGINAL_EFFECT_SET_ASIDE = (
         "marginal-effect-set-aside",
         "The marginal effect printed in the paper is not what its coefficients give, so it is not used.",
@@ -188,7 +192,7 @@ class Flag(Explained):
         "coarse-standard-error-set-aside",
         "The standard error is printed with one digit; a printed item that pins it more tightly is used.",
     )
-    ZERO_CELL_CORRECTED = "zero-cell-corrected", "A count of zero was handled by adding to the cells."
+    CELLS_CORRECTED = "cells-corrected", "A count of zero was handled by adding to the cells."
     GEOMETRIC_MEAN = (
         "geometric-mean-used",
         "The mean of a logarithm stands in: the point of evaluation is the geometric mean.",

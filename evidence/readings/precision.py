@@ -191,7 +191,8 @@ def _finest(
             found.append(_Found(PrecisionSource.F, _quotient(b, f_as_t(precision.f)), None, degrees))
         if precision.p is not None and 0 < precision.p.value < 1:
             statistic_span = p_as_statistic(precision.p, degrees)
-            found.append(_Found(PrecisionSource.P, _quotient(b, statistic_span), statistic_span.point, degrees))
+            if statistic_span.point > 0:
+                found.append(_Found(PrecisionSource.P, _quotient(b, statistic_span), statistic_span.point, degrees))
     return min(found, key=lambda each: each.looseness, default=None)
 
 

@@ -36,6 +36,8 @@ from evidence.readings.vocabulary import EffectScale, ErrorCode, Kind, Metric, T
 LONGEST_NAME = 200
 LARGEST_COUNT = 10**12
 MOST_TERMS = 12
+#: Below this an interval has practically no width, whatever the standard error.
+SMALLEST_LEVEL = Decimal("0.01")
 
 #: Metrics that are logarithms of ratios, so that a paper may print the ratio instead.
 RATIO_METRICS = frozenset({Metric.LOG_RISK_RATIO, Metric.LOG_ODDS_RATIO, Metric.LOG_RESPONSE_RATIO})
@@ -535,13 +537,13 @@ def _interval(holder: _Object, estimate: Printed | None) -> Interval | None:
     level = inner.number("level", required=True)
     low = inner.number("low", required=True)
     high = inner.number("high", required=True)
-    if level is not None and not 0 < level.value < 1:
+    if level is not None and not SMALLEST_LEVEL <= level.value < 1:
         share = level.value / 100
         hint = f" Write {share} for {level} %." if 0 < share < 1 else ""
         inner.wrong(
             "level",
             ErrorCode.LEVEL_OUTSIDE_UNIT_INTERVAL,
-            f"The level {level} is not a share between 0 and 1.{hint}",
+            f"The level {level} is not a share between {SMALLEST_LEVEL} and 1.{hint}",
         )
         level = None
     if level is None or low is None or high is None:
