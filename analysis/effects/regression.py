@@ -49,6 +49,15 @@ def of_regression(reading: Regression, draft: Draft) -> Bounded:
     return _on_scale(reading, _slope(reading, draft), draft)
 
 
+def _is_reachable(reading: Regression, metric: str) -> bool:
+    """Differences and ratios of groups are a regression's slope only on the outcome's matching scale."""
+    if metric == Metric.LOG_RISK_RATIO:
+        return False
+    if metric in _GROUP_METRICS:
+        return reading.exposure.scale is VariableScale.LEVEL and reading.outcome.scale is _GROUP_METRICS[metric]
+    return True
+
+
 # --- the point of evaluation
 # --------------------------------------------------------------------------------------
 
