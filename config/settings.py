@@ -94,6 +94,9 @@ TEMPLATES = [
 
 STATEMENT_TIMEOUT_SECONDS = environment.whole_number("STEELYARD_STATEMENT_TIMEOUT_SECONDS", default=60)
 IDLE_TRANSACTION_TIMEOUT_SECONDS = 300
+# The role that web server and worker act as once connected: one that cannot rewrite history (`evidence.privileges`).
+# Migrations run without it, as the tables' owner.
+DATABASE_ROLE = environment.text("STEELYARD_DATABASE_ROLE")
 
 
 def database_from_url(url: str) -> dict[str, Any]:
@@ -123,7 +126,10 @@ def database_from_url(url: str) -> dict[str, Any]:
         "ATOMIC_REQUESTS": False,
     }
     options = " ".join(filter(None, [parts.pop("options", ""), session]))
-    return described | {"OPTIONS": parts | {"options": options, "application_name": "steelyard"}}
+    described["OPTIONS"] = parts | {"options": options, "application_name": "steelyard"}
+    if DATABASE_ROLE:
+        described["OPTIONS"]["assume_role"] = DATABASE_ROLE
+    return described
 
 
 DATABASES = {
@@ -249,6 +255,13 @@ SPECTACULAR_SETTINGS = {
     # What a PATCH takes has shapes of its own, in which nothing is required.
     "COMPONENT_SPLIT_PATCH": False,
     "ENUM_GENERATE_CHOICE_DESCRIPTION": False,
+    "ENUM_NAME_OVERRIDES": {
+        "DecisionEnum": "evidence.vocabularies.Decision.choices",
+        "DecisionMadeEnum": "api.serializers.questions.DECISIONS",
+        "MetricEnum": "evidence.vocabularies.METRIC_CHOICES",
+        "PaperKindEnum": "evidence.vocabularies.PaperKind.choices",
+        "ResolutionKindEnum": "evidence.vocabularies.ResolutionKind.choices",
+    },
     "POSTPROCESSING_HOOKS": [
         "drf_spectacular.hooks.postprocess_schema_enums",
         "api.schema.complete",

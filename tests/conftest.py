@@ -57,9 +57,7 @@ def _prepare(config: pytest.Config) -> None:
     url = os.environ.get("STEELYARD_TEST_DATABASE_URL", "")
     if not url:
         # Beside the folder, not in it: the database's own account may have to enter it.
-        database = EmbeddedPostgreSQL(
-            Path(tempfile.mkdtemp(prefix="steelyard-test-db-")), settings=DISPOSABLE
-        )
+        database = EmbeddedPostgreSQL(Path(tempfile.mkdtemp(prefix="steelyard-test-db-")), settings=DISPOSABLE)
         config.stash[_DATABASE] = database
         database.start()
         database.ensure_database()
@@ -71,6 +69,7 @@ def _prepare(config: pytest.Config) -> None:
             "SECRET_KEY": secrets.token_urlsafe(48),
             "CELERY_BROKER_URL": "filesystem://",
             "STEELYARD_DATA": str(folder),
+            "STEELYARD_DATABASE_ROLE": "",
             "STEELYARD_DEBUG": "0",
             "STEELYARD_HASHED_STATIC": "0",
             "STEELYARD_HOSTS": "localhost,127.0.0.1,[::1],testserver",

@@ -1,13 +1,17 @@
-"""`python -m config.services COMMAND`: demo, clean-demo, web, worker, scheduler.
+"""`python -m config.services COMMAND`.
 
-`demo` starts everything on this machine. `web`, `worker` and `scheduler` become one process of an installation that
-brings its own database and queue; that is what the containers run.
+`demo` starts everything on this machine and `clean-demo` deletes what it keeps. The others belong to an
+installation that brings its own database and queue, and are what the containers run: `web`, `worker` and
+`scheduler` become that process, `migrate` brings the tables and the service's database role up to date, `healthy`
+asks the web server whether it can serve, `manage ARGUMENTS` is any management command.
 """
 
 from __future__ import annotations
 
+import http.client
 import os
 import shutil
+import subprocess
 import sys
 
 from django.core.exceptions import ImproperlyConfigured
@@ -38,6 +42,36 @@ def become(command: list[str]) -> None:
     os.execve(command[0], command, commands.process_environment(os.environ))
 
 
+def migrate() -> int:
+    """Bring the tables up to date as their owner, then give the service's role what it needs on them."""
+    role = environment.text("STEELYARD_DATABASE_ROLE")
+    owner = {name: value for name, value in os.environ.items() if name != "STEELYARD_DATABASE_ROLE"}
+    steps = [["migrate", "--no-input"]] + ([["grant_service_role", role]] if role else [])
+    for step in steps:
+        status = subprocess.run(commands.manage(*step), env=owner, check=False).returncode
+        if status != 0:
+            return status
+    return 0
+
+
+def healthy() -> int:
+    """0 if the web server of this container answers that it is ready."""
+    port = environment.text("STEELYARD_BIND", "127.0.0.1:8000").rpartition(":")[2]
+    # Under a name that the service answers to.
+    host = environment.words("STEELYARD_HOSTS", default="localhost")[0]
+    connection = http.client.HTTPConnection("127.0.0.1", int(port), timeout=8)
+    try:
+        connection.request("GET", "/health/ready", headers={"Host": host})
+        answer = connection.getresponse()
+        print(answer.status, answer.read().decode(errors="replace"))
+        return 0 if answer.status == 200 else 1
+    except OSError as error:
+        print(error)
+        return 1
+    finally:
+        connection.close()
+
+
 def main(arguments: list[str]) -> int:
     """Carry out one command; a refusal is one sentence and exit status 1."""
     try:
@@ -61,6 +95,12 @@ def main(arguments: list[str]) -> int:
                 )
             case ["scheduler"]:
                 become(commands.scheduler())
+            case ["manage", *rest]:
+                become(commands.manage(*rest))
+            case ["migrate"]:
+                return migrate()
+            case ["healthy"]:
+                return healthy()
             case _:
                 print(__doc__, file=sys.stderr)
                 return 2

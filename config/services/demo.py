@@ -37,11 +37,18 @@ from config.services.processes import Child, Watchdog, start
 ADDRESS = "127.0.0.1"
 FREE_MEGABYTES = 400
 READY_SECONDS = 90
+# What web server and worker act as, so that not even a fault of theirs could rewrite history.
+SERVICE_ROLE = "steelyard_service"
 # A process that keeps ending is not started for ever.
 RESTARTS_ALLOWED = 3
 RESTART_WINDOW_SECONDS = 60
 
-_NOT_FOR_CHILDREN = frozenset({"DATABASE_URL", "CELERY_BROKER_URL", "SECRET_KEY", "DJANGO_SETTINGS_MODULE"})
+_NOT_FOR_CHILDREN = frozenset(
+    {
+        *("DATABASE_URL", "CELERY_BROKER_URL", "SECRET_KEY", "DJANGO_SETTINGS_MODULE"),
+        *("STEELYARD_DATABASE_ROLE", "STEELYARD_HASHED_STATIC", "STEELYARD_DEBUG"),
+    }
+)
 
 
 class StopAsked(Exception):
@@ -89,6 +96,7 @@ class Demo:
         write_private(self.folder / "database-url", database.url())
         say("Bringing its tables up to date ...")
         self._step("migrate", "migrate", "--no-input", verbosity=1)
+        self._step("privileges", "grant_service_role", SERVICE_ROLE, verbosity=1)
         self._step("static", "collectstatic", "--no-input", verbosity=0)
         say("Loading the invented scenario (once) ...")
         self._step("load-demo", "load_demo", verbosity=1, sign_in=sign_in)
@@ -153,7 +161,8 @@ class Demo:
                 raise ValueError(f"There is no service called {name}.")
         with self._log_path(name).open("ab") as log:
             log.truncate(0)
-            self._keep(start(name, command, environment=self._environment(), log=log, grace_seconds=grace_seconds))
+            surroundings = self._environment() | {"STEELYARD_DATABASE_ROLE": SERVICE_ROLE}
+            self._keep(start(name, command, environment=surroundings, log=log, grace_seconds=grace_seconds))
 
     def _wait_until_ready(self) -> None:
         deadline = time.monotonic() + READY_SECONDS

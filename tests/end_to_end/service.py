@@ -303,6 +303,9 @@ def running_service(
             queue_name=queue_name,
         )
         service.manage("migrate", "--no-input", "--verbosity", "0")
+        # From here on as in an installation: the processes act as a role that cannot rewrite history.
+        role = stack.enter_context(_service_role(service, fresh_url))
+        service.environment["STEELYARD_DATABASE_ROLE"] = role
         service.manage("collectstatic", "--no-input", "--verbosity", "0")
         stack.callback(service.forget_queue)
         stack.callback(service.stop)
@@ -338,6 +341,19 @@ def _fresh_database(server_url: str) -> Iterator[str]:
     finally:
         with psycopg.connect(server_url, autocommit=True) as connection:
             connection.execute(sql.SQL("DROP DATABASE {} WITH (FORCE)").format(sql.Identifier(name)))
+
+
+@contextmanager
+def _service_role(service: RunningService, database_url: str) -> Iterator[str]:
+    # A name of its own: roles belong to the whole server, which several runs may share.
+    role = f"steelyard_test_{secrets.token_hex(6)}"
+    service.manage("grant_service_role", role)
+    try:
+        yield role
+    finally:
+        with psycopg.connect(database_url, autocommit=True) as connection:
+            connection.execute(sql.SQL("DROP OWNED BY {0}").format(sql.Identifier(role)))
+            connection.execute(sql.SQL("DROP ROLE {0}").format(sql.Identifier(role)))
 
 
 def _free_port() -> int:
