@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 
+from analysis.effects import Flag
 from analysis.frames import Frame, FrameRow, row_json
 from analysis.methods import FLAGS, Interval, NotEstimable, PooledEffect, Trail, pool_effects, trail
 from analysis.plans import Plan
@@ -55,11 +56,12 @@ def synthesise(frame: Frame, progress: Progress = quietly) -> SynthesisResult:
     pooled = _pool(frame.plan, values, errors)
     progress("trail", 2, 3)
     steps = _trail(frame, values, errors)
-    weights = {} if isinstance(pooled, NotEstimable) else dict(zip(rows, pooled.weights.tolist(), strict=True))
+    shares = [] if isinstance(pooled, NotEstimable) else pooled.weights.tolist()
+    weights = dict(zip((row.estimate for row in rows), shares, strict=True))
     return SynthesisResult(
         result={**_pooled_json(frame, pooled), "counts": _counts(rows), "flags": _flags(frame, pooled)},
         trail=steps,
-        rows=[row_json(row, weights.get(row)) for row in frame.rows],
+        rows=[row_json(row, weights.get(row.estimate)) for row in frame.rows],
         papers={
             str(paper): {"label": facts.label, "published_on": facts.published_on, "standing": facts.standing}
             for paper, facts in frame.papers.items()
