@@ -58,8 +58,7 @@ def _is_reachable(reading: Regression, metric: str) -> bool:
     return True
 
 
-# --- the point of evaluation
-# --------------------------------------------------------------------------------------
+# --- the point of evaluation -------------------------------------------------------------------------------------
 
 
 def _entered_exposure(reading: Regression, draft: Draft) -> float:
