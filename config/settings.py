@@ -7,7 +7,6 @@ first two into the data folder for a local installation; there is no default for
 
 from __future__ import annotations
 
-from importlib.util import find_spec
 from typing import Any
 from urllib.parse import urlsplit
 
@@ -50,12 +49,10 @@ INSTALLED_APPS = [
     "django.contrib.postgres",
     "rest_framework",
     "drf_spectacular",
-    # Until every package has its configuration, those that have.
-    *(
-        f"{package}.apps.{package.capitalize()}Config"
-        for package in ("evidence", "analysis", "api", "dashboard")
-        if find_spec(f"{package}.apps")
-    ),
+    "evidence.apps.EvidenceConfig",
+    "analysis.apps.AnalysisConfig",
+    "api.apps.ApiConfig",
+    "dashboard.apps.DashboardConfig",
 ]
 
 MIDDLEWARE = [
@@ -251,8 +248,8 @@ SPECTACULAR_SETTINGS = {
     "OAS_VERSION": "3.1.1",
     "SERVE_INCLUDE_SCHEMA": False,
     "SCHEMA_PATH_PREFIX": r"/api/v1",
-    "COMPONENT_SPLIT_REQUEST": True,
-    # What a PATCH takes has shapes of its own, in which nothing is required.
+    # What comes in and what goes out have shapes of their own, and so has what a PATCH takes.
+    "COMPONENT_SPLIT_REQUEST": False,
     "COMPONENT_SPLIT_PATCH": False,
     "ENUM_GENERATE_CHOICE_DESCRIPTION": False,
     "ENUM_NAME_OVERRIDES": {
@@ -343,6 +340,7 @@ CELERY_BEAT_SCHEDULE = {
         # With no worker about, sweeps pile up in the queue; a late one has nothing to add.
         "options": {"expires": SWEEP_INTERVAL_SECONDS},
     },
+    "forget-sign-in-failures": {"task": "analysis.tasks.forget_sign_in_failures", "schedule": 24 * 60 * 60},
 }
 
 # --- Logging -----------------------------------------------------------------------------------------------

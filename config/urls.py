@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from importlib.util import find_spec
-
 from django.contrib import admin
 from django.urls import include, path
 
@@ -19,10 +17,8 @@ urlpatterns = [
     path("problems/<slug:name>/", problems.code, name="problem"),
     # The address as it stands in a problem's type.
     path("problems/<slug:name>", problems.code),
+    path("", include("dashboard.urls")),
 ]
-# Until the package has its addresses.
-if find_spec("dashboard.urls"):
-    urlpatterns.append(path("", include("dashboard.urls")))
 
 handler400 = "config.errors.bad_request"
 handler403 = "config.errors.permission_denied"
