@@ -52,7 +52,7 @@ def a_paper(number: int, rng: np.random.Generator, estimates: int) -> dict[str, 
         error = float(np.exp(rng.uniform(np.log(0.01), np.log(0.06))))
         rows.append(
             {
-                "question": "bench",
+                "questions": ["bench"],
                 "locator": {"page": "9", "table": "2", "row": str(row + 1)},
                 "reading": {
                     "kind": "ready-made-effect",

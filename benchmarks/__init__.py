@@ -1,0 +1,1 @@
+"""Benchmarks: repeatable measurements, each against a named yardstick in the same run."""
