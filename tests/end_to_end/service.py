@@ -126,7 +126,7 @@ class RunningService:
                 return found
             if time.monotonic() > deadline:
                 raise AssertionError(f"Waited {seconds:g} s in vain for {what or ask}.")
-            time.sleep(0.02)
+            time.sleep(0.05)
 
     # --- Mistreating it ---------------------------------------------------------------------------------------
 

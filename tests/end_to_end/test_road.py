@@ -100,7 +100,7 @@ class Client:
                 "study": {"label": f"Trial {trial['study']}", "design": "trial"},
                 "estimates": [
                     {
-                        "question": "bcg",
+                        "questions": ["bcg"],
                         "locator": {"page": "698", "table": "1", "row": f"Trial {trial['study']}"},
                         "reading": {
                             "kind": "two-proportions",
@@ -225,7 +225,8 @@ def test_a_worker_killed_in_the_middle_of_a_job_loses_nothing(client: Client) ->
         running = "SELECT count(*) FROM analysis_recomputerequest WHERE state = 'running'"
         service.wait_for(lambda: service.query(running) != [(0,)], what="a job to be running")
         service.kill_worker()
-    assert service.query(running) == [(1,)]
+    # A worker has two processes, and the next request of the question may have been taken up by the other.
+    assert service.query(running)[0][0] >= 1
     service.start_worker()
     answer = client.settled(papers=13)
     assert close(answer["effect"]["value"], TRAIL[-1]["reml_mu"])
