@@ -361,8 +361,10 @@ def _regression(top: _Object) -> Regression | None:
         )
     )
     outcome, exposure = _variable(top, "outcome"), _variable(top, "exposure")
+    before = len(top.errors)
     terms = _terms(top, exposure)
-    covariances = _covariances(top, terms)
+    # A covariance of a term that was itself refused is no second mistake.
+    covariances = _covariances(top, terms, names_are_known=len(top.errors) == before)
     marginal_effect = _marginal_effect(top)
     observations = top.count("observations", smallest=1)
     degrees = top.count("residual_degrees_of_freedom", smallest=1)
@@ -396,7 +398,7 @@ def _terms(top: _Object, exposure: Variable | None) -> tuple[Term, ...]:
             f"A reading holds up to {MOST_TERMS} terms: those with the exposure in them, not the controls.",
         )
         return ()
-    if not holders:
+    if not top.content["terms"]:
         top.wrong("terms", ErrorCode.NO_TERMS, "Give at least one term in which the exposure appears.")
     found: dict[str, Term] = {}
     for holder in holders:
@@ -447,7 +449,7 @@ def _term(holder: _Object, exposure: Variable | None) -> Term | None:
     return Term(form, coefficient, precision, moderator, at)
 
 
-def _covariances(top: _Object, terms: tuple[Term, ...]) -> tuple[Covariance, ...] | None:
+def _covariances(top: _Object, terms: tuple[Term, ...], *, names_are_known: bool) -> tuple[Covariance, ...] | None:
     holders = top.list_below("covariances", "a covariance")
     if holders is None:
         return None
@@ -468,7 +470,7 @@ def _covariances(top: _Object, terms: tuple[Term, ...]) -> tuple[Covariance, ...
             continue
         first, second = between
         unknown = [name for name in (first, second) if name not in names]
-        if unknown:
+        if unknown and names_are_known:
             holder.wrong(
                 "between",
                 ErrorCode.TERM_UNKNOWN,
