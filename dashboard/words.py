@@ -3,6 +3,7 @@
 from collections.abc import Mapping
 from typing import Any
 
+from analysis.effects import explain
 from analysis.frames import LEFT_OUT_WORDS
 from dashboard.figures.numbers import MINUS
 from evidence.readings.vocabulary import Metric
@@ -84,12 +85,21 @@ def share(level: str | float) -> str:
 
 def left_out_in_words(code: str) -> str:
     """Why an estimate that was decided in does not count."""
-    return LEFT_OUT_WORDS.get(code) or _sentence(code)
+    return LEFT_OUT_WORDS.get(code) or explain(code) or _sentence(code)
 
 
 def flag_in_words(code: str) -> str:
     """What an effect rests on."""
-    return _sentence(code)
+    return explain(code) or _sentence(code)
+
+
+def rules_in_words(derivation: Mapping[str, Any]) -> list[str]:
+    """How an effect was made, one sentence a rule, the first with its source."""
+    rules = [derivation.get("rule"), *derivation.get("conversions", ())]
+    sentences = [explain(rule) or _sentence(rule) for rule in rules if rule]
+    if sentences and derivation.get("source"):
+        sentences[0] += f" ({derivation['source']}.)"
+    return sentences
 
 
 def step_in_words(value: Any) -> str:

@@ -18,7 +18,7 @@ from dashboard.figures.numbers import write_number
 from dashboard.paging import page_of
 from dashboard.printed import PrintedReading, as_printed, characteristics_in_words, place_in_words
 from dashboard.templatetags.pages import day
-from dashboard.words import flag_in_words, left_out_in_words, step_in_words
+from dashboard.words import flag_in_words, left_out_in_words, rules_in_words, step_in_words
 from evidence.models import EligibilityRevision, QuestionRevision, Resolution, StudyRevision
 from evidence.queries.estimates import estimates_of_papers
 from evidence.queries.papers import paper_at, paper_history, papers_at, studies_at
@@ -33,7 +33,7 @@ class Use:
     question: QuestionRevision
     summary: str
     eligibility: str = ""
-    rule: str = ""
+    rules: tuple[str, ...] = ()
     steps: tuple[tuple[str, str], ...] = ()
     flags: tuple[str, ...] = ()
 
@@ -56,7 +56,7 @@ class OpenedEstimate:
 @visiting
 def papers(request: HttpRequest, visit: Visit) -> HttpResponse:
     """Papers held at the moment, newest publication first; ?q= keeps those with these words in title or label."""
-    wanted = request.GET.get("q", "").strip()[:200]
+    wanted = request.GET.get("q", "").replace("\x00", "").strip()[:200]
     found = papers_at(visit.base, visit.moment).order_by("-published_from", "label", "paper_id")
     for word in wanted.split():
         found = found.filter(Q(title__icontains=word) | Q(label__icontains=word))
@@ -169,10 +169,10 @@ def _use(answer: AnswerView, decision: EligibilityRevision, row: dict[str, Any] 
     return Use(question, summary, why, *_derived(effect))
 
 
-def _derived(effect: Effect | None) -> tuple[str, tuple[tuple[str, str], ...], tuple[str, ...]]:
-    """The rule, the steps and the flags of an effect's derivation, as texts."""
+def _derived(effect: Effect | None) -> tuple[tuple[str, ...], tuple[tuple[str, str], ...], tuple[str, ...]]:
+    """The rules, the steps and the flags of an effect's derivation, as texts."""
     if effect is None:
-        return "", (), ()
-    steps = tuple((str(step["name"]), step_in_words(step["value"])) for step in effect.derivation.get("steps", ()))
-    rule = str(effect.derivation.get("rule", "")).replace("-", " ")
-    return rule, steps, tuple(flag_in_words(flag) for flag in effect.flags)
+        return (), (), ()
+    steps = tuple((step["name"].replace("-", " "), step_in_words(step["value"])) for step in effect.derivation["steps"])
+    flags = tuple(flag_in_words(flag) for flag in effect.flags)
+    return tuple(rules_in_words(effect.derivation)), steps, flags

@@ -25,11 +25,11 @@ def sign_in(request: HttpRequest) -> HttpResponse:
         if request.user.is_authenticated:
             return redirect(wanted or settings.LOGIN_REDIRECT_URL)
         return render(request, "dashboard/sign_in.html", {"next": wanted})
-    email = request.POST.get("email", "")
+    email = _storable(request.POST.get("email", ""))
     try:
         person = check_sign_in(
             email=email,
-            password=request.POST.get("password", ""),
+            password=_storable(request.POST.get("password", "")),
             address=request.META.get("REMOTE_ADDR", ""),
         )
     except NotSignedIn as error:
@@ -42,6 +42,11 @@ def sign_in(request: HttpRequest) -> HttpResponse:
         return response
     login(request, person, backend="django.contrib.auth.backends.ModelBackend")
     return redirect(wanted or settings.LOGIN_REDIRECT_URL)
+
+
+def _storable(text: str) -> str:
+    """Without NUL, which the database cannot compare with anything."""
+    return text.replace("\x00", "")
 
 
 @require_POST
