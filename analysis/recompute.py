@@ -79,12 +79,14 @@ def _open_or_join(base: EvidenceBase, question: Question, change: int) -> Rung:
             VALUES (%s, %s, %s, %s, 'queued', 0, %s, 0, 0, '', '', %s)
             ON CONFLICT (question_id) WHERE state = 'queued'
             DO UPDATE SET last_change = GREATEST(analysis_recomputerequest.last_change, EXCLUDED.last_change)
-            RETURNING id
+            RETURNING id, (xmax = 0)
             """,
             [base.pk, question.pk, change, change, now + FIRST_RING_AFTER, now],
         )
-        (request_id,) = cursor.fetchone()
-    transaction.on_commit(lambda: ring(request_id), robust=True)
+        request_id, opened = cursor.fetchone()
+    if opened:
+        # Whoever joins a queued request relies on the bell that was rung when it was opened, or on the sweep.
+        transaction.on_commit(lambda: ring(request_id), robust=True)
     return Rung(request_id, question.slug)
 
 

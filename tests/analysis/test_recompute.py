@@ -3,6 +3,7 @@
 import threading
 from collections.abc import Callable, Iterator
 from datetime import timedelta
+from typing import Any
 from uuid import uuid4
 
 import pytest
@@ -67,15 +68,20 @@ def test_a_request_and_its_fact_appear_together_or_not_at_all(access: Access) ->
 
 @pytest.mark.django_db
 def test_the_queue_is_rung_only_after_the_commit(
-    access: Access, rings: list[int], django_capture_on_commit_callbacks: Callable[..., object]
+    access: Access, rings: list[int], django_capture_on_commit_callbacks: Callable[..., Any]
 ) -> None:
+    run(only_request().pk)
     rings.clear()
-    with django_capture_on_commit_callbacks(execute=False):
+    with django_capture_on_commit_callbacks(execute=False) as waiting:
         a_paper(access)
-    assert rings == []
+        assert rings == []
+    opened = RecomputeRequest.objects.get(state=State.QUEUED)
+    for ring in waiting:
+        ring()
+    assert rings == [opened.pk]
     with django_capture_on_commit_callbacks(execute=True):
         a_paper(access)
-    assert rings == [only_request().pk]
+    assert rings == [opened.pk], "a change that joins a queued request does not ring again"
 
 
 @pytest.mark.django_db
