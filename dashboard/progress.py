@@ -8,7 +8,7 @@ from django.db.models import Max
 from django.utils import timezone
 
 from analysis.models import RecomputeRequest
-from evidence.models import EvidenceBase
+from evidence.models import EvidenceBase, QuestionRevision
 
 State = RecomputeRequest.State
 # A healthy service answers within seconds; what waits longer than this needs someone to look.
@@ -17,10 +17,14 @@ LATE_AFTER = timedelta(minutes=2)
 
 @dataclass(frozen=True)
 class Followed:
-    """A request with what a page says about it. is_newest: no later request has been made for its question."""
+    """A request with what a page says about it. is_newest: no later request has been made for its question.
+
+    title: of the question, as it is worded now.
+    """
 
     request: RecomputeRequest
     is_newest: bool
+    title: str = ""
 
     @property
     def is_open(self) -> bool:
@@ -65,8 +69,9 @@ def _ended(problem: str) -> str:
 
 
 def followed(requests: list[RecomputeRequest], evidence_base: EvidenceBase) -> list[Followed]:
-    newest = newest_requests(evidence_base, [request.question_id for request in requests])
-    return [Followed(request, request.pk in newest) for request in requests]
+    questions = [request.question_id for request in requests]
+    newest, titles = newest_requests(evidence_base, questions), _titles(questions)
+    return [Followed(request, request.pk in newest, titles[request.question_id]) for request in requests]
 
 
 def newest_requests(evidence_base: EvidenceBase, questions: list[Any] | None = None) -> set[int]:
@@ -79,11 +84,17 @@ def newest_requests(evidence_base: EvidenceBase, questions: list[Any] | None = N
 
 def needing_a_person(evidence_base: EvidenceBase) -> list[Followed]:
     """The newest requests that failed or are late, oldest first."""
-    newest = (
+    unfinished = (
         RecomputeRequest.objects.filter(pk__in=newest_requests(evidence_base))
         .exclude(state=State.DONE)
         .select_related("question")
         .order_by("id")
     )
-    entries = [Followed(request, True) for request in newest]
+    titles = _titles([request.question_id for request in unfinished])
+    entries = [Followed(request, True, titles[request.question_id]) for request in unfinished]
     return [entry for entry in entries if entry.request.state == State.FAILED or entry.is_late]
+
+
+def _titles(questions: list[Any]) -> dict[Any, str]:
+    found = QuestionRevision.objects.current().filter(question__in=questions)
+    return dict(found.values_list("question_id", "title"))

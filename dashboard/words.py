@@ -112,7 +112,8 @@ def step_in_words(value: Any) -> str:
         return ", ".join(f"{key} {step_in_words(each)}" for key, each in value.items())
     if isinstance(value, list):
         return ", ".join(step_in_words(each) for each in value)
-    return str(value)
+    # What is neither a number nor made of them is a code.
+    return str(value).replace("-", " ")
 
 
 def _sentence(code: str) -> str:

@@ -47,7 +47,6 @@ def base(request: HttpRequest, visit: Visit) -> HttpResponse:
             Line(answer, counts_in_words(answer), draw_small_trail(trail, f"trail-{number}") if trail else None)
         )
     entries = [] if visit.moment.past else needing_a_person(visit.base)
-    titles = {line.answer.question.question_id: line.answer.question.title for line in lines}
     return render(
         request,
         "dashboard/base.html",
@@ -55,7 +54,7 @@ def base(request: HttpRequest, visit: Visit) -> HttpResponse:
             "visit": visit,
             "here": "base",
             "lines": lines,
-            "entries": [(titles[entry.request.question_id], entry) for entry in entries],
+            "entries": entries,
             "proposals": 0 if visit.moment.past else _proposals(visit),
         },
     )
