@@ -38,7 +38,7 @@ from dashboard.figures.trail import (
     trail_table,
 )
 from dashboard.printed import short_place
-from evidence.vocabularies import Metric
+from evidence.readings.vocabulary import Metric
 
 RATIOS = frozenset({Metric.LOG_RISK_RATIO, Metric.LOG_ODDS_RATIO, Metric.LOG_RESPONSE_RATIO})
 # Beyond e^±70 a ratio is no number anyone reads, and a logarithmic axis needs it above zero.
@@ -81,16 +81,21 @@ def trail_of(answer: AnswerView, today: date) -> Trail | None:
         return None
     show = shown_by(answer)
     precision = _precision_of_papers(answer)
+
+    def shown(value: float | None) -> float | None:
+        return None if value is None else show(value)
+
     steps = tuple(
         TrailStep(
             on=date.fromisoformat(step["published_from"]),
             papers=tuple(PaperMark(paper["label"], precision.get(paper["paper"])) for paper in step["entered"]),
             n_papers=step["papers"],
             n_estimates=step["estimates"],
-            **{
-                name: None if step[name] is None else show(step[name])
-                for name in ("value", "low", "high", "prediction_low", "prediction_high")
-            },
+            value=shown(step["value"]),
+            low=shown(step["low"]),
+            high=shown(step["high"]),
+            prediction_low=shown(step["prediction_low"]),
+            prediction_high=shown(step["prediction_high"]),
         )
         for step in answer.synthesis.trail
     )

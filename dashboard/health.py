@@ -9,7 +9,8 @@ from dashboard.drawings import RATIOS, measure_of, shown_by
 from dashboard.figures.numbers import NO_BREAK_SPACE, write_count, write_number
 from dashboard.words import share
 from evidence.models import QuestionRevision
-from evidence.vocabularies import Direction, Metric
+from evidence.readings.vocabulary import Metric
+from evidence.vocabularies import Direction
 
 
 def counts_in_words(answer: AnswerView) -> str:

@@ -10,6 +10,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from datetime import date
 from itertools import pairwise
+from textwrap import wrap
 
 from dashboard.figures.axes import ValueScale, labelled_ticks, value_scale, widened
 from dashboard.figures.numbers import Measure, write_count, write_date
@@ -367,8 +368,9 @@ def _end(trail: Trail, sheet: _Sheet, across: LinearScale, up: ValueScale) -> st
     apart = trail.measure.unit_apart
     if sheet.end_label:
         if apart:
-            unit = plain(shorten(apart, sheet.width - sheet.right - 10, 12))
-            parts.append(element("text", unit, x=sheet.right + 10, y=y + 37, class_="axis"))
+            for number, line in enumerate(wrap(apart, 13)[:3]):
+                text = plain(shorten(line, sheet.width - sheet.right, 12))
+                parts.append(element("text", text, x=sheet.right + 10, y=y + 37 + 15 * number, class_="axis"))
         parts.append(element("text", value, x=sheet.right + 10, y=y + 5, class_="now"))
         if interval:
             parts.append(element("text", interval, x=sheet.right + 10, y=y + 21, class_="axis"))

@@ -229,3 +229,40 @@ def test_steps_of_one_day_become_one_with_all_its_papers():
 def test_a_trail_reaches_to_a_publication_that_lies_ahead():
     assert later_of([date(2030, 1, 1)], date(2026, 1, 1)) == date(2030, 1, 1)
     assert later_of([], date(2026, 1, 1)) == date(2026, 1, 1)
+
+
+def test_a_long_unit_is_said_once_and_not_on_every_tick():
+    words = texts(
+        parse(trail_figure(replace(TRAIL, measure=Measure("test scores", "standard deviations", 2)), ident="t"))
+    )
+    assert [text for text in words if "standard" in text] == ["standard"]
+    assert "deviations" in words
+    assert "+4.00" in words
+    narrow = trail_figure(replace(TRAIL, measure=Measure("yield", "kilograms a hectare", 0)), ident="t", narrow=True)
+    assert [text for text in texts(parse(narrow)) if "kilograms" in text] == ["+4 3 to 5 kilograms a hectare"]
+
+
+def test_the_axis_makes_room_for_large_numbers():
+    steps = (replace(STEPS[1], value=2.0e6, low=1.0e6, high=3.0e6),)
+    root = parse(trail_figure(Trail(Measure("income", "", 0), steps, 0.95, date(2020, 1, 1)), ident="t"))
+    (line,) = of_class(root, "null", "line")
+    longest = max(
+        len("".join(node.itertext())) for node in of_class(root, "axis", "text") if node.get("text-anchor") == "end"
+    )
+    assert longest >= 8
+    assert number(line, "x1") >= 7.2 * longest
+
+
+def test_a_ratio_written_as_a_change_keeps_its_logarithmic_place():
+    change = Measure("attendance", "%", 0, 1.0, ratio=True, as_change=True)
+    steps = (replace(_step(2010, 0.5), low=0.25, high=1.0), replace(_step(2012, 2.0), low=1.0, high=4.0))
+    trail = Trail(change, steps, 0.95, date(2014, 1, 1))
+    root = parse(trail_figure(trail, ident="t"))
+    (null,) = of_class(root, "null", "line")
+    heights = [y for _, y in corners(of_class(root, "line", "polyline")[0])]
+    assert heights[0] - number(null, "y1") == pytest.approx(number(null, "y1") - heights[-1], abs=0.2)
+    assert "0\N{NO-BREAK SPACE}%" in texts(root)
+    # Half is 50 % less, double is 100 % more.
+    assert [row[4] for row in trail_table(trail).rows] == [-50.0, 100.0]
+    assert [row[4] for row in trail_table(trail).written] == ["−50", "100"]
+    assert trail_sentence(trail).endswith("and its interval includes zero.")

@@ -124,3 +124,11 @@ def test_a_downloaded_figure_carries_its_rules_without_variables():
     assert "var(" not in figure_rules()
     assert "@" not in figure_rules()
     assert (root.get("width"), root.get("height")) == ("20", "10")
+
+
+def test_only_a_ratio_compared_with_one_can_be_written_as_a_change():
+    assert Measure("risk", "%", 1, 1.0, ratio=True, as_change=True).write(1.24) == "+24.0\N{NO-BREAK SPACE}%"
+    with pytest.raises(ValueError, match="written as a change"):
+        Measure("risk", "%", 1, 0.0, as_change=True)
+    with pytest.raises(ValueError, match="positive"):
+        Measure("risk", "", 1, 0.0, ratio=True)
