@@ -6,6 +6,7 @@ from datetime import UTC, date
 import pytest
 from django.db import connection
 from django.test.utils import CaptureQueriesContext
+from django.urls import reverse
 from django.utils import timezone
 
 from analysis.answers import CAUTIONS, answer_at
@@ -142,7 +143,7 @@ def test_a_failed_request_is_shown_with_its_reason_where_people_look(answered, l
 def test_a_failed_request_can_be_run_again_by_a_reviewer_only(answered, look):
     request = RecomputeRequest.objects.get(question=answered.question)
     RecomputeRequest.objects.filter(pk=request.pk).update(state="failed", problem="No.", finished_at=timezone.now())
-    address = f"/evidence-bases/{answered.evidence_base.slug}/work/{request.pk}/retry/"
+    address = reverse("dashboard:retry", args=[answered.evidence_base.slug, request.pk])
     reader = a_member(answered.access, Role.READER)
     assert page(look(reader, "work")).one("main").every("button") == []
     assert signed_in(reader.actor.person).post(address).status_code == 403
@@ -156,7 +157,7 @@ def test_a_failed_request_can_be_run_again_by_a_reviewer_only(answered, look):
 
 def test_running_again_what_did_not_fail_is_refused_in_words(answered, look):
     request = RecomputeRequest.objects.get(question=answered.question)
-    address = f"/evidence-bases/{answered.evidence_base.slug}/work/{request.pk}/retry/"
+    address = reverse("dashboard:retry", args=[answered.evidence_base.slug, request.pk])
     response = signed_in(answered.access.actor.person).post(address, follow=True)
     assert "only a failed one can be run again" in page(response).one("ul", class_="messages").words
     assert RecomputeRequest.objects.count() == 1
