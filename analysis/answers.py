@@ -36,6 +36,10 @@ NO_PROTOCOL = "There is no answer yet: no protocol has been adopted for this que
 BEING_COMPUTED = "The first answer to this question is being computed."
 
 
+# The frame and the trail of a synthesis are a hundred times the size of its result; they are read when asked for.
+HEAVY = ("synthesis__rows", "synthesis__papers", "synthesis__trail")
+
+
 @dataclass(frozen=True)
 class AnswerView:
     """An answer as it is read. ``synthesis`` is None where there is none to show; ``reason`` then says why.
@@ -155,6 +159,7 @@ def _newest_answer(question: Question, change: int) -> Answer | None:
     return (
         Answer.objects.filter(question=question, change_number__lte=change)
         .select_related("synthesis__protocol")
+        .defer(*HEAVY)
         .order_by("-change_number")
         .first()
     )
@@ -185,6 +190,7 @@ def syntheses_of(question: Question, moment: Moment) -> QuerySet[Answer]:
     return (
         Answer.objects.filter(question=question, change_number__lte=moment.change)
         .select_related("synthesis__protocol", "question")
+        .defer(*HEAVY)
         .order_by("-change_number")
     )
 

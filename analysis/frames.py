@@ -4,7 +4,6 @@ A frame is what a synthesis is a function of. It holds every estimate that was d
 end do not count, each with the reason, so that nothing leaves the pool unseen.
 """
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import date
 from typing import Any
@@ -133,6 +132,8 @@ def evidence_frame(question: QuestionRevision, protocol: Protocol, change: int) 
         EstimateRevision.objects.as_of(change)
         .filter(estimate__in=decided_in.values("estimate"))
         .select_related("estimate", "resolution")
+        # Readings are long and only needed for effects that were not derived before.
+        .defer("resolution__reading", "resolution__characteristics")
     )
     papers = {
         paper.paper_id: PaperFacts(paper.label, paper.published_on, paper.published_from, paper.standing)
@@ -146,7 +147,7 @@ def evidence_frame(question: QuestionRevision, protocol: Protocol, change: int) 
     left_out = {e.pk: _left_out(e, papers[e.estimate.paper_id].standing, plan) for e in estimates}
     way = plan.effect_plan(good_direction=question.good_direction)
     effects = effects_of(
-        question.question, [e.resolution for e in estimates if e.resolution and not left_out[e.pk]], way
+        question.question, {e.resolution_id for e in estimates if e.resolution_id and not left_out[e.pk]}, way
     )
     rows = [_row(e, studies[e.study_id], left_out[e.pk], effects) for e in estimates]
     # One order for ever: by date, then by identifiers that never change, so sums are added up alike on every run.
@@ -154,19 +155,22 @@ def evidence_frame(question: QuestionRevision, protocol: Protocol, change: int) 
     return Frame(question, protocol, plan, change, tuple(rows), papers)
 
 
-def effects_of(question: Question, resolutions: Sequence[Resolution], way: EffectPlan) -> dict[UUID, Effect]:
-    """The effect of each accepted record, by resolution; derived once for each way of deriving and then kept."""
+def effects_of(question: Question, resolutions: set[UUID], way: EffectPlan) -> dict[UUID, Effect]:
+    """The effect of each accepted record, by resolution; derived once for each way of deriving and then kept.
+
+    The derivations stay in the database: a frame has no use for them.
+    """
     digest = way_digest(way)
-    wanted = {resolution.pk: resolution for resolution in resolutions}
-    known = {e.resolution_id: e for e in Effect.objects.filter(resolution__in=wanted.keys(), way_sha256=digest)}
-    missing = [resolution for pk, resolution in wanted.items() if pk not in known]
+    kept = Effect.objects.filter(resolution__in=resolutions, way_sha256=digest).defer("derivation")
+    known = {effect.resolution_id: effect for effect in kept}
+    missing = resolutions - known.keys()
     if missing:
         # Another worker may be deriving the same ones; equal inputs give equal rows, so whoever is first is right.
         Effect.objects.bulk_create(
-            [_derived(question, resolution, way, digest) for resolution in missing], ignore_conflicts=True
+            [_derived(question, resolution, way, digest) for resolution in Resolution.objects.filter(pk__in=missing)],
+            ignore_conflicts=True,
         )
-        derived = Effect.objects.filter(resolution__in=[r.pk for r in missing], way_sha256=digest)
-        known.update({effect.resolution_id: effect for effect in derived})
+        known.update({effect.resolution_id: effect for effect in kept.filter(resolution__in=missing)})
     return known
 
 

@@ -205,7 +205,9 @@ def _put_back(request: RecomputeRequest, claim: UUID, error: Exception) -> None:
     """
     now = timezone.now()
     mine = RecomputeRequest.objects.filter(pk=request.pk, claim=claim, state=State.RUNNING)
-    sentence = f"{type(error).__name__}: {error}"[:2000]
+    sentence = f"Computing it failed {_times(request.attempts)}; the last time with {type(error).__name__}: {error}"[
+        :2000
+    ]
     if request.attempts >= MOST_ATTEMPTS:
         mine.update(state=State.FAILED, claim=None, lease_until=None, finished_at=now, problem=sentence)
     else:

@@ -56,8 +56,9 @@ def synthesise(frame: Frame, progress: Progress = quietly) -> SynthesisResult:
     pooled = _pool(frame.plan, values, errors)
     progress("trail", 2, 3)
     steps = _trail(frame, values, errors)
-    shares = [] if isinstance(pooled, NotEstimable) else pooled.weights.tolist()
-    weights = dict(zip((row.estimate for row in rows), shares, strict=True))
+    weights = {}
+    if not isinstance(pooled, NotEstimable):
+        weights = dict(zip((row.estimate for row in rows), pooled.weights.tolist(), strict=True))
     return SynthesisResult(
         result={**_pooled_json(frame, pooled), "counts": _counts(rows), "flags": _flags(frame, pooled)},
         trail=steps,

@@ -146,6 +146,8 @@ def measured() -> dict[str, float]:
 
         # Without a worker beside it, so that posting is measured and not the sharing of two cores.
         service.stop_worker()
+        # The kept connection was idle meanwhile, and the server closes idle ones.
+        program = Connection(service, token)
         serial = iter(range(2000, 10_000))
 
         def post() -> None:

@@ -88,6 +88,7 @@ def trail_of(answer: AnswerView, today: date) -> Trail | None:
     steps = tuple(
         TrailStep(
             on=date.fromisoformat(step["published_from"]),
+            known_as=min((paper["published_on"] for paper in step["entered"]), key=len),
             papers=tuple(PaperMark(paper["label"], precision.get(paper["paper"])) for paper in step["entered"]),
             n_papers=step["papers"],
             n_estimates=step["estimates"],

@@ -47,6 +47,15 @@ def write_date(on: date) -> str:
     return f"{on.day} {MONTHS[on.month - 1]} {on.year}"
 
 
+def write_published(published_on: str) -> str:
+    """A date of publication as exactly as it is known: "1948", "August 1973", "3 May 2019"."""
+    year, *rest = published_on.split("-")
+    if not rest:
+        return year
+    month = f"{MONTHS[int(rest[0]) - 1]} {year}"
+    return month if len(rest) == 1 else f"{int(rest[1])} {month}"
+
+
 def write_count(number: int, singular: str, plural: str | None = None) -> str:
     """The number with its noun: "1 paper", "41 papers"."""
     noun = singular if number == 1 else (plural or singular + "s")

@@ -13,7 +13,7 @@ from itertools import pairwise
 from textwrap import wrap
 
 from dashboard.figures.axes import ValueScale, labelled_ticks, value_scale, widened
-from dashboard.figures.numbers import Measure, write_count, write_date
+from dashboard.figures.numbers import Measure, write_count, write_published
 from dashboard.figures.scales import LinearScale, covering, date_ticks
 from dashboard.figures.svg import document, element, plain, points, shorten
 from dashboard.figures.tables import Cell, Column, Table
@@ -32,6 +32,7 @@ class TrailStep:
     """The answer from `on` until the next step. value is None where no answer could be given (`reason` says why).
 
     papers: those that entered at this step. n_papers, n_estimates: in the answer from this step on.
+    known_as: the date as far as it is known, for words ("2019", "2019-05"); empty when the day itself is.
     """
 
     on: date
@@ -44,6 +45,17 @@ class TrailStep:
     prediction_low: float | None = None
     prediction_high: float | None = None
     reason: str = ""
+    known_as: str = ""
+
+    @property
+    def date(self) -> str:
+        """The date in words, claiming no more than is known."""
+        return write_published(self.known_as or self.on.isoformat())
+
+    @property
+    def dated(self) -> str:
+        """The date with its preposition: "in 2019", "on 3 May 2019"."""
+        return f"{'on' if len(self.known_as or self.on.isoformat()) == 10 else 'in'} {self.date}"
 
 
 @dataclass(frozen=True)
@@ -166,7 +178,7 @@ def trail_sentence(trail: Trail) -> str:
     stands += f" ({measure.write_interval(last.low, last.high)})"
     answered = [step for step in trail.steps if step.value is not None]
     if len(answered) == 1:
-        return f"{stands}; this is its first value, from {write_date(last.on)}."
+        return f"{stands}; this is its first value, from {last.date}."
     first = answered[0]
     null = measure.null_in_words
     side = _side(last, measure.null)
@@ -179,8 +191,8 @@ def trail_sentence(trail: Trail) -> str:
                 break
             since = step
         where = "above" if side > 0 else "below"
-        verdict = f"its whole interval has been {where} {null} since {write_date(since.on)}"
-    began = f"it began at {measure.write(first.value or 0.0)} on {write_date(first.on)}"
+        verdict = f"its whole interval has been {where} {null} since {since.date}"
+    began = f"it began at {measure.write(first.value or 0.0)} {first.dated}"
     return f"{stands}; {began}, and {verdict}."
 
 
@@ -209,7 +221,7 @@ def trail_table(trail: Trail) -> Table:
         texts = ["not given" if number is None else measure.write_bare(number) for number in numbers]
         if step.value is None and step.reason:
             texts[0] = step.reason
-        written.append((write_date(step.on), names, str(step.n_papers), str(step.n_estimates), *texts))
+        written.append((step.date, names, str(step.n_papers), str(step.n_estimates), *texts))
     caption = f"{trail.title}, by {trail.clock}"
     return Table(caption, columns, tuple(rows), tuple(written))
 
@@ -337,7 +349,7 @@ def _rail(trail: Trail, sheet: _Sheet, across: LinearScale) -> str:
         x = across.at(step.on.toordinal())
         for paper in step.papers:
             height = 3 + (_TICK_HEIGHT - 3) * (paper.precision / most if paper.precision is not None else 0)
-            label = f"{paper.label}, {write_date(step.on)}"
+            label = f"{paper.label}, {step.date}"
             # Papers of one day share a place; their ticks stand over one another and the tallest shows.
             parts.append(
                 element(
@@ -424,8 +436,8 @@ def _readings(trail: Trail, sheet: _Sheet, across: LinearScale) -> str:
 def _reading(trail: Trail, step: TrailStep) -> str:
     papers = write_count(step.n_papers, "paper")
     if step.value is None:
-        return f"From {write_date(step.on)}: no pooled effect, {papers}"
-    text = f"From {write_date(step.on)}: {trail.measure.write(step.value)}"
+        return f"From {step.date}: no pooled effect, {papers}"
+    text = f"From {step.date}: {trail.measure.write(step.value)}"
     if step.low is not None and step.high is not None:
         text += f" ({trail.measure.write_interval(step.low, step.high)})"
     return f"{text}, {papers}"
