@@ -205,9 +205,8 @@ def _put_back(request: RecomputeRequest, claim: UUID, error: Exception) -> None:
     """
     now = timezone.now()
     mine = RecomputeRequest.objects.filter(pk=request.pk, claim=claim, state=State.RUNNING)
-    sentence = f"Computing it failed {_times(request.attempts)}; the last time with {type(error).__name__}: {error}"[
-        :2000
-    ]
+    tries = "once" if request.attempts == 1 else f"{request.attempts} times"
+    sentence = f"Computing it failed {tries}; the last time with {type(error).__name__}: {error}"[:2000]
     if request.attempts >= MOST_ATTEMPTS:
         mine.update(state=State.FAILED, claim=None, lease_until=None, finished_at=now, problem=sentence)
     else:
