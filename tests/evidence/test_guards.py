@@ -94,8 +94,8 @@ def refuse_truncation() -> None:
 def test_a_revision_can_only_be_closed(table: str) -> None:
     assert "may only be closed" in refused(f"UPDATE {table} SET from_change = from_change")
     assert "may only be closed" in refused(
-        f"UPDATE {table} SET until_change = 900, recorded_until = clock_timestamp(), from_change = 1 WHERE until_change IS NULL "
-        f"AND from_change > 1"
+        f"UPDATE {table} SET until_change = 900, recorded_until = clock_timestamp(), from_change = 1 "
+        f"WHERE until_change IS NULL AND from_change > 1"
     )
 
 
