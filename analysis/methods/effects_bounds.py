@@ -188,7 +188,7 @@ def _with_print(
         total = math.fsum(lengths)
         low, high = max(0.0, 2 * max(lengths) - total), total
         if v is not None and window is not None:
-            used = window[0] * (1 - 1e-9) <= float(v @ matrix @ v) <= window[1] * (1 + 1e-9)
+            used = bool(window[0] * (1 - 1e-9) <= float(v @ matrix @ v) <= window[1] * (1 + 1e-9))
     elif len(open_pairs) == 1:
         method = "one-open-covariance"
         low, high, used = _one_open(w, matrix, open_pairs[0], v, window)
@@ -197,7 +197,7 @@ def _with_print(
         low, high, used, converged = _semidefinite(w, open_pairs, centre, v, window)
         if not converged:
             # Bounds that surely hold: those of the terms alone.
-            sizes = [abs(each) for each in w]
+            sizes = [abs(each) for each in w.tolist()]
             low, high = max(0.0, 2 * max(sizes) - math.fsum(sizes)), math.fsum(sizes)
     uncorrelated = min(max(math.sqrt(max(plain, 0.0)), low), high)
     return StandardErrorBounds(low * unit, high * unit, uncorrelated * unit, method, shrinkage, used, converged)
@@ -246,11 +246,11 @@ def _one_open(
         base, slope = float(v @ closed @ v), 2.0 * float(v[i] * v[j])
         slack = 1e-12
         if slope == 0:
-            used = window[0] - slack <= base <= window[1] + slack
+            used = bool(window[0] - slack <= base <= window[1] + slack)
         else:
             ends = sorted(((window[0] - base) / slope, (window[1] - base) / slope))
             cut_low, cut_high = max(low, ends[0]), min(high, ends[1])
-            used = cut_low <= cut_high + slack / abs(slope)
+            used = bool(cut_low <= cut_high + slack / abs(slope))
             if used:
                 low, high = min(cut_low, cut_high), max(cut_low, cut_high)
     base, slope = float(w @ closed @ w), 2.0 * float(w[i] * w[j])
@@ -278,16 +278,19 @@ def _possible_centre(n: int, correlations: dict[Pair, float]) -> tuple[float, Fl
         return share, np.eye(n) + min(share, -(1.0 - 1e-9) / min(lowest, -1e-300)) * printed
     open_pairs = [(i, j) for i in range(n) for j in range(i + 1, n) if (i, j) not in correlations]
     basis = _basis(n, open_pairs)
-    # Unknowns: the open entries and the share; the objective is the share, started from the identity (share 0).
-    path = _follow(np.eye(n), np.concatenate([basis, printed[np.newaxis]]), _unit(len(open_pairs) + 1, -1), stop=1.0)
-    reached = float(path.position[-1])
+    # Unknowns: the open entries and the share; the objective is the share, started from the identity (share 0). Printed
+    # values far beyond one are brought to it first, so that the search knows no extremes.
+    largest = max(1.0, float(np.abs(printed).max()))
+    directions = np.concatenate([basis, printed[np.newaxis] / largest])
+    path = _follow(np.eye(n), directions, _unit(len(open_pairs) + 1, -1), stop=largest)
+    reached = float(path.position[-1]) / largest
     if reached > 1.0:
         # The identity and the point reached are both inside, and so is the point at share 1 between them.
         return 1.0, np.eye(n) + (path.matrix - np.eye(n)) / reached
-    share = min(1.0, reached + path.gap)
-    if share > 1.0 - 1e-9:
-        share = 1.0
-    return share, path.matrix
+    if reached + path.gap / largest > 1.0 - 1e-9:
+        # Possible as printed, on the very edge: to the accuracy of the search.
+        return 1.0, path.matrix
+    return reached, path.matrix
 
 
 def _unit(size: int, place: int) -> FloatArray:
@@ -318,7 +321,7 @@ def _follow(start: FloatArray, basis: FloatArray, objective: FloatArray, *, stop
     exceeds it.
     """
     n = start.shape[0]
-    y = np.zeros(len(basis))
+    y: FloatArray = np.zeros(len(basis))
     matrix = start.copy()
     scale = float(np.linalg.norm(objective))
     if len(basis) == 0 or scale == 0.0:

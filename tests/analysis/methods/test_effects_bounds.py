@@ -279,6 +279,24 @@ def test_bounds_scale_and_ignore_the_sign_of_c(seed, n, factor):
     assert scaled.low == pytest.approx(factor * bounds.low, rel=1e-9, abs=1e-9 * factor * bounds.high)
 
 
+@settings(max_examples=60, deadline=None)
+@given(st.integers(0, 2**32 - 1), st.integers(2, 5), st.sampled_from([1, 10, 30]))
+def test_extreme_sizes_and_impossible_print_still_give_finite_bounds(seed, n, decades):
+    rng = np.random.default_rng(seed)
+    errors = (10.0 ** rng.uniform(-decades, decades, n)).tolist()
+    c = (rng.normal(size=n) * 10.0 ** rng.uniform(-decades, decades, n)).tolist()
+    pairs = [(i, j) for i in range(n) for j in range(i + 1, n) if rng.random() < 0.5]
+    covariances = {pair: float(rng.normal() * 10.0 ** rng.uniform(-decades, decades)) for pair in pairs}
+    other = tuple(rng.normal(size=n).tolist())
+    size = float(10.0 ** rng.uniform(-decades, decades))
+    bounds = standard_error_bounds(c, errors, covariances, known=KnownCombination(other, 0.9 * size, 1.1 * size))
+    assert 0 <= bounds.low <= bounds.uncorrelated <= bounds.high < math.inf
+    assert bounds.high <= math.fsum(abs(a * b) for a, b in zip(c, errors, strict=True)) * (1 + 1e-9)
+    assert 0 <= bounds.shrinkage <= 1
+    assert {type(bounds.low), type(bounds.high), type(bounds.uncorrelated), type(bounds.shrinkage)} == {float}
+    assert type(bounds.known_combination_used) is bool
+
+
 def test_covariances_beyond_their_errors_are_shrunk_and_say_so():
     # Two terms with a correlation of 1.25: the largest possible share is 1/1.25.
     two = standard_error_bounds((1.0, 1.0), (1.0, 1.0), {(0, 1): 1.25})
