@@ -231,14 +231,18 @@ def _add_headers(method: str, described: dict[str, Any]) -> None:
 
 def _add_problems(path: str, method: str, described: dict[str, Any]) -> None:
     in_base = "{base}" in path
-    statuses = {HTTPStatus.NOT_ACCEPTABLE, HTTPStatus.INTERNAL_SERVER_ERROR, HTTPStatus.UNPROCESSABLE_ENTITY}
+    statuses = {
+        HTTPStatus.BAD_REQUEST,
+        HTTPStatus.NOT_ACCEPTABLE,
+        HTTPStatus.UNPROCESSABLE_ENTITY,
+        HTTPStatus.INTERNAL_SERVER_ERROR,
+    }
     if not _is_public(described):
         statuses |= {HTTPStatus.UNAUTHORIZED, HTTPStatus.FORBIDDEN}
     if in_base:
         statuses.add(HTTPStatus.NOT_FOUND)
     if method in ("post", "patch"):
         statuses |= {
-            HTTPStatus.BAD_REQUEST,
             HTTPStatus.LENGTH_REQUIRED,
             HTTPStatus.REQUEST_ENTITY_TOO_LARGE,
             HTTPStatus.UNSUPPORTED_MEDIA_TYPE,

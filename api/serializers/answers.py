@@ -33,6 +33,10 @@ class HeterogeneityOut(Out):
 
     tau_squared = serializers.FloatField(allow_null=True, help_text="Variance between studies, squared metric units.")
     tau_squared_interval = IntervalOut(allow_null=True)
+    between_studies = serializers.FloatField(
+        allow_null=True, help_text="Its part between studies; null unless the protocol has three levels."
+    )
+    within_studies = serializers.FloatField(allow_null=True, help_text="Its part between estimates of one study.")
     i_squared = serializers.FloatField(allow_null=True, help_text="A share between 0 and 1.")
     i_squared_interval = IntervalOut(allow_null=True)
     h_squared = serializers.FloatField(allow_null=True)
@@ -144,6 +148,8 @@ class StepOut(Out):
     prediction_low = serializers.FloatField(allow_null=True)
     prediction_high = serializers.FloatField(allow_null=True)
     tau_squared = serializers.FloatField(allow_null=True)
+    between_studies = serializers.FloatField(allow_null=True)
+    within_studies = serializers.FloatField(allow_null=True)
     i_squared = serializers.FloatField(allow_null=True)
     q = serializers.FloatField(allow_null=True)
     q_p = serializers.FloatField(allow_null=True)

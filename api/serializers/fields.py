@@ -2,7 +2,7 @@
 
 import re
 from collections.abc import Callable, Mapping
-from datetime import date, datetime
+from datetime import UTC, date, datetime
 from decimal import Decimal
 from typing import Any
 from uuid import UUID
@@ -114,7 +114,7 @@ class Instant(serializers.Field):
         # The first and last year cannot be moved to another zone.
         if found is None or found.tzinfo is None or not 1 < found.year < 9999:
             self.fail("invalid")
-        return found
+        return found.astimezone(UTC)
 
     def to_representation(self, value: datetime) -> str:
         return value.isoformat().replace("+00:00", "Z")

@@ -9,7 +9,9 @@ from typing import Any
 from drf_spectacular.utils import extend_schema_field
 
 from analysis.plans import (
+    CLUSTERS,
     COVARIANCE_POLICIES,
+    DEPENDENCE,
     HETEROGENEITY,
     INTERVALS,
     KEPT_STANDINGS,
@@ -178,7 +180,8 @@ PLAN: Schema = {
                 "double_zero": _word(("exclude", "correct")),
             },
         },
-        "dependence": _word(("independent",)),
+        "dependence": _word(DEPENDENCE),
+        "cluster": _word(CLUSTERS),
         "standings": {"type": "array", "minItems": 1, "items": _word(KEPT_STANDINGS)},
         "single_codings": {"type": "boolean"},
     },

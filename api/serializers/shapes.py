@@ -6,6 +6,7 @@ from typing import Any
 from rest_framework import serializers
 from rest_framework.exceptions import ErrorDetail
 
+from api.codes import all_codes
 from evidence.errors import FieldProblem, Invalid
 
 _OWN = "non_field_errors"
@@ -25,7 +26,6 @@ _CODES: dict[str, tuple[str, str]] = {
     "null_characters_not_allowed": ("not-acceptable-text", ""),
     "surrogate_characters_not_allowed": ("not-acceptable-text", ""),
     "unprintable": ("not-acceptable-text", ""),
-    "unknown-field": ("unknown-field", ""),
     "too_many": ("too-many", ""),
     "scheme": ("not-a-name", ""),
     "max_digits": ("not-a-number", ""),
@@ -39,6 +39,7 @@ _INVALID_BY_FIELD: dict[str, str] = {
     "EmailField": "not-acceptable-value",
     "YesNo": "not-yes-or-no",
     "Identifier": "not-an-identifier",
+    "Identifiers": "not-text",
     "Day": "not-a-date",
     "Instant": "not-a-time",
     "Size": "not-a-number",
@@ -94,7 +95,9 @@ def _faults(detail: Any, field: Any, pointer: str) -> Iterator[FieldProblem]:
 def _fault(detail: ErrorDetail, field: Any, pointer: str) -> FieldProblem:
     if detail.code == "invalid":
         return FieldProblem(pointer, _INVALID_BY_FIELD.get(type(field).__name__, "not-acceptable-value"), str(detail))
-    code, sentence = _CODES.get(detail.code, ("not-acceptable-value", ""))
+    # A complaint of ours carries a code of ours already.
+    own = detail.code if detail.code in all_codes() else "not-acceptable-value"
+    code, sentence = _CODES.get(detail.code, (own, ""))
     return FieldProblem(pointer, code, sentence or str(detail))
 
 

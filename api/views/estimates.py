@@ -5,7 +5,7 @@ from uuid import UUID
 from rest_framework.request import Request
 from rest_framework.response import Response
 
-from api.pagination import BY_ID, Order
+from api.pagination import BY_ID, Order, whole_number
 from api.schema import operation
 from api.serializers.estimates import CodingOut, CorrectionIn, EstimateOut, EstimateWrittenOut
 from evidence.errors import Invalid
@@ -17,10 +17,12 @@ from .base import EvidenceBaseView
 
 PAPER = "paper"
 BY_ESTIMATE = Order("estimate_id", UUID)
+# Within one paper the number is unique.
+IN_PRINTED_ORDER = Order("estimate__number", whole_number)
 
 
 class Estimates(EvidenceBaseView):
-    """Estimates with their accepted records, in the order in which they arrived."""
+    """Estimates with their accepted records, in the order in which their papers arrived."""
 
     actions = {"GET": Action.READ}
     is_list = True
@@ -32,14 +34,15 @@ class Estimates(EvidenceBaseView):
         gives=EstimateOut,
         as_of=True,
         pages=True,
-        filters={PAPER: "Only those of the paper with this id."},
+        filters={PAPER: "Only those of the paper with this id, in printed order."},
     )
     def get(self, request: Request, base: str) -> Response:
         # Each row shows who accepted its record; without the join every row would ask for that person.
         rows = estimates_at(self.access.evidence_base, self.moment).select_related("resolution__decided_by")
-        if (paper := request.query_params.get(PAPER)) is not None:
-            rows = rows.filter(estimate__paper_id=_identifier(paper))
-        return self.page(EstimateOut, rows, BY_ESTIMATE)
+        if (paper := request.query_params.get(PAPER)) is None:
+            return self.page(EstimateOut, rows, BY_ESTIMATE)
+        rows = rows.filter(estimate__paper_id=_identifier(paper))
+        return self.page(EstimateOut, rows, IN_PRINTED_ORDER)
 
 
 class OneEstimate(EvidenceBaseView):

@@ -1,6 +1,7 @@
 """Programs that speak to the service, as tests see them: every answer is checked against the served description."""
 
 from typing import Any
+from urllib.parse import urlsplit
 
 from django.http import HttpResponse
 from django.test import Client
@@ -22,12 +23,12 @@ class Program(Client):
         return f"/api/v1/evidence-bases/{self.base}/{path}"
 
     def generic(self, method: str, path: str, *args: Any, **options: Any) -> HttpResponse:
-        if not path.startswith("/"):
+        if not path.startswith(("/", "http://")):
             path = self.at(path)
         if self.token is not None:
             options["headers"] = {"Authorization": f"Token {self.token}", **(options.get("headers") or {})}
         answer = super().generic(method, path, *args, **options)
-        check_against_description(method, path.partition("?")[0], answer)
+        check_against_description(method, urlsplit(path).path, answer)
         return answer
 
     def send(self, path: str, body: Any, method: str = "POST", **options: Any) -> HttpResponse:
