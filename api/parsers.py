@@ -12,13 +12,15 @@ from typing import IO, Any
 
 from django.conf import settings
 from django.core.exceptions import RequestDataTooBig
-from django.http import UnreadablePostError
+from django.http import RawPostDataException, UnreadablePostError
 from rest_framework.exceptions import ParseError
 from rest_framework.parsers import BaseParser
 
 DEEPEST = 32
 LARGEST_WHOLE_NUMBER = 2**53 - 1
+MOST_DISCARDED = 32 * 1024 * 1024
 _LONGEST_NUMBER = 400
+_PIECE = 64 * 1024
 
 
 class MalformedJSON(ParseError):
@@ -43,6 +45,20 @@ class BoundedJSONParser(BaseParser):
         if len(body) > cap:
             raise RequestDataTooBig(f"The body exceeds {cap} bytes.")
         return decode(body)
+
+
+def discard(stream: IO[bytes]) -> None:
+    """Read what is left of a body that nobody will look at, within reason, and forget it.
+
+    A client that is still sending when the connection closes often never reads the answer, which says what was wrong.
+    """
+    left = MOST_DISCARDED
+    try:
+        while left > 0 and (piece := stream.read(_PIECE)):
+            left -= len(piece)
+    except (UnreadablePostError, RawPostDataException):
+        # The client has gone, or the body has been read already: there is nothing left to discard.
+        return
 
 
 def decode(body: bytes) -> Any:

@@ -121,7 +121,7 @@ def _explained(error: Exception) -> Explained | None:
         case EvidenceError():
             return _of_the_register(error)
         case django_errors.RequestDataTooBig():
-            return HTTPStatus.REQUEST_ENTITY_TOO_LARGE, "body-too-large", "", (), {"Connection": "close"}
+            return HTTPStatus.REQUEST_ENTITY_TOO_LARGE, "body-too-large", "", (), {}
         case Http404():
             return HTTPStatus.NOT_FOUND, "not-found", "", (), {}
         case django_errors.PermissionDenied():

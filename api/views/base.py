@@ -16,6 +16,7 @@ from rest_framework.views import APIView
 
 from api import moments
 from api.pagination import CURSOR, LIMIT, Order, listed, page_of
+from api.parsers import discard
 from api.permissions import InEvidenceBase
 from api.problems import LengthRequired
 from api.serializers.shapes import In, Out
@@ -81,8 +82,12 @@ class ServiceView(APIView):
             moments.put_headers(response, self.moment_shown(), is_final=self.is_final(request, response))
         else:
             moments.put_headers(response, None, is_final=False)
+            if request.method in _BODIES:
+                discard(request._request)
         if request.method in ("GET", "HEAD") and response.status_code == HTTPStatus.OK:
             response.add_post_render_callback(self._conditional)
+        if request.method == "HEAD":
+            response.add_post_render_callback(_without_body)
         return response
 
     def moment_shown(self) -> Moment | None:
@@ -195,6 +200,12 @@ class EvidenceBaseView(ServiceView):
             if not weak and _REVISION.fullmatch(tag):
                 return UUID(tag)
         raise Conflict("This is not what the ETag stands for. Read it again, then decide.", code="changed-meanwhile")
+
+
+def _without_body(response: HttpResponse) -> None:
+    """The headers of an answer alone. Web servers would drop the body, with a warning each time."""
+    response["Content-Length"] = str(len(response.content))
+    response.content = b""
 
 
 def entity_tag(revision: Revision) -> str:
