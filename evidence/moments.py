@@ -90,5 +90,10 @@ def _parse_time(text: str) -> datetime:
         raise problem from error
     if moment is None or moment.tzinfo is None:
         raise problem
+    try:
+        # Zones that Python knows and PostgreSQL does not, and times before the calendar once in UTC.
+        moment = moment.astimezone(UTC)
+    except OverflowError as error:
+        raise problem from error
     # A day that is not over yet means "so far".
     return min(moment, timezone.now()) if day is not None and day <= timezone.now().date() else moment

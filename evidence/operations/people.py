@@ -36,7 +36,7 @@ def create_person(*, email: str, name: str, password: str, may_create_evidence_b
     except ValidationError as error:
         raise Invalid(
             [
-                FieldProblem(f"/{name}", "not-acceptable", " ".join(messages))
+                FieldProblem(f"/{name}", "not-acceptable-value", " ".join(messages))
                 for name, messages in error.message_dict.items()
             ]
         ) from error

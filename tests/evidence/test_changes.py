@@ -90,7 +90,10 @@ def test_a_time_means_the_last_change_committed_by_then() -> None:
 
 
 @pytest.mark.django_db
-@pytest.mark.parametrize("text", ["soon", "2024-13-01", "2024-05-01T10:00:00", "-3", "99", "9999-01-01", "1.5", "٣"])
+@pytest.mark.parametrize(
+    "text",
+    ["soon", "0001-01-01T00:00:00+23:59", "2024-13-01", "2024-05-01T10:00:00", "-3", "99", "9999-01-01", "1.5", "٣"],
+)
 def test_what_is_no_moment_is_refused(text: str) -> None:
     base = a_base().evidence_base
     with pytest.raises(Invalid) as caught:
