@@ -28,6 +28,11 @@ HETEROGENEITY = (
 INTERVALS = ("hartung-knapp", "hartung-knapp-floored", "t", "normal")
 COVARIANCE_POLICIES = ("largest", "uncorrelated", "exclude")
 ZERO_CELL_CORRECTIONS = ("constant", "treatment-arm", "none")
+INDEPENDENT, THREE_LEVEL = "independent", "three-level"
+DEPENDENCE = (INDEPENDENT, THREE_LEVEL)
+CLUSTERS = ("study", "paper")
+NESTED_HETEROGENEITY = ("restricted-maximum-likelihood", "maximum-likelihood")
+NESTED_INTERVALS = ("t", "normal")
 KEPT_STANDINGS = (Standing.CURRENT, Standing.CORRECTED, Standing.SUPERSEDED, Standing.RETRACTED)
 
 DEFAULT_ZERO_CELLS = {"correction": "constant", "amount": "0.5", "when": "any-zero", "double_zero": "exclude"}
@@ -45,7 +50,8 @@ class Plan:
     covariance_policy: str = "largest"
     evaluation: Mapping[str, Any] = field(default_factory=lambda: {"at": "sample-means"})
     zero_cells: Mapping[str, str] = field(default_factory=lambda: dict(DEFAULT_ZERO_CELLS))
-    dependence: str = "independent"
+    dependence: str = INDEPENDENT
+    cluster: str = "study"
     standings: tuple[str, ...] = (Standing.CURRENT, Standing.CORRECTED)
     single_codings: bool = True
 
@@ -58,18 +64,21 @@ class Plan:
             if name not in cls.__dataclass_fields__
         ]
         model = data.get("model", "random-effects")
+        nested = data.get("dependence") == THREE_LEVEL
         given = {
             "metric": question_metric,
             # Only the random-effects model estimates a variance between studies; elsewhere there is nothing to name.
             "heterogeneity": "restricted-maximum-likelihood" if model == "random-effects" else None,
-            "interval": "hartung-knapp" if model == "random-effects" else "normal" if model == "common-effect" else "t",
+            "interval": _usual_interval(model, nested),
             **{name: value for name, value in data.items() if name in cls.__dataclass_fields__},
         }
         problems += _one_of(pointer, given, "metric", tuple(Metric))
         problems += _one_of(pointer, given, "model", MODELS)
         problems += _one_of(pointer, given, "interval", INTERVALS)
         problems += _one_of(pointer, given, "covariance_policy", COVARIANCE_POLICIES)
-        problems += _one_of(pointer, given, "dependence", ("independent",))
+        problems += _one_of(pointer, given, "dependence", DEPENDENCE)
+        problems += _one_of(pointer, given, "cluster", CLUSTERS)
+        problems += _dependence_problems(pointer, model, given) if nested else []
         problems += _heterogeneity_problems(pointer, model, given)
         problems += _interval_problems(pointer, model, given)
         problems += _level_problems(pointer, given)
@@ -104,6 +113,7 @@ class Plan:
             "evaluation": dict(self.evaluation),
             "zero_cells": dict(self.zero_cells),
             "dependence": self.dependence,
+            "cluster": self.cluster,
             "standings": list(self.standings),
             "single_codings": self.single_codings,
         }
@@ -127,6 +137,39 @@ def _one_of(pointer: str, given: Mapping[str, Any], name: str, allowed: Any) -> 
             f"{pointer}/{name}", "unknown-choice", f"{name} is one of {', '.join(allowed)}; not {given[name]!r}."
         )
     ]
+
+
+def _usual_interval(model: object, nested: bool) -> str:
+    if model == "random-effects" and not nested:
+        return "hartung-knapp"
+    return "normal" if model == "common-effect" else "t"
+
+
+def _dependence_problems(pointer: str, model: object, given: Mapping[str, Any]) -> list[FieldProblem]:
+    if model != "random-effects":
+        return [
+            FieldProblem(
+                f"{pointer}/model", "contradiction", "Three levels of variance belong to the random-effects model."
+            )
+        ]
+    problems = []
+    if given["heterogeneity"] not in NESTED_HETEROGENEITY:
+        problems.append(
+            FieldProblem(
+                f"{pointer}/heterogeneity",
+                "contradiction",
+                f"The variances of three levels are estimated by {' or '.join(NESTED_HETEROGENEITY)} only.",
+            )
+        )
+    if given["interval"] not in NESTED_INTERVALS:
+        problems.append(
+            FieldProblem(
+                f"{pointer}/interval",
+                "contradiction",
+                "A Hartung–Knapp interval treats estimates as independent; with three levels it is t or normal.",
+            )
+        )
+    return problems
 
 
 def _heterogeneity_problems(pointer: str, model: str, given: Mapping[str, Any]) -> list[FieldProblem]:
@@ -208,7 +251,8 @@ def _evaluation_problems(pointer: str, given: Mapping[str, Any]) -> list[FieldPr
         except InvalidOperation:
             finite = False
         if not finite:
-            problems.append(FieldProblem(f"{here}/at/{name}", "not-a-number", "Write a number as text, as in '3.2'."))
+            place = str(name).replace("~", "~0").replace("/", "~1")
+            problems.append(FieldProblem(f"{here}/at/{place}", "not-a-number", "Write a number as text, as in '3.2'."))
     return problems
 
 

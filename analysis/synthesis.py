@@ -4,18 +4,21 @@
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from typing import Any
 
 import numpy as np
 
 from analysis.effects import Flag
 from analysis.frames import Frame, FrameRow, row_json
-from analysis.methods import FLAGS, Interval, NotEstimable, PooledEffect, Trail, pool_effects, trail
-from analysis.plans import Plan
+from analysis.methods import FLAGS, NotEstimable
+from analysis.methods.three_level import FLAGS as THREE_LEVEL_FLAGS
+from analysis.plans import INDEPENDENT
+from analysis.pools import Pooled, follow, interval_json, pool
 
 FLAG_WORDS = {
     **FLAGS,
+    **THREE_LEVEL_FLAGS,
     "no-counting-estimates": "No estimate counts yet.",
     "dependence-ignored": "Some studies give several estimates, and the protocol treats them as independent: "
     "the interval is then too narrow.",
@@ -53,9 +56,10 @@ def synthesise(frame: Frame, progress: Progress = quietly) -> SynthesisResult:
     values = np.array([row.value for row in rows], dtype=float)
     errors = np.array([row.standard_error for row in rows], dtype=float)
     progress("pooling", 1, 3)
-    pooled = _pool(frame.plan, values, errors)
+    clusters = _clusters(frame)
+    pooled = pool(frame.plan, values, errors, clusters)
     progress("trail", 2, 3)
-    steps = _trail(frame, values, errors)
+    steps = _trail(frame, values, errors, clusters)
     weights = {}
     if not isinstance(pooled, NotEstimable):
         weights = dict(zip((row.estimate for row in rows), pooled.weights.tolist(), strict=True))
@@ -70,18 +74,14 @@ def synthesise(frame: Frame, progress: Progress = quietly) -> SynthesisResult:
     )
 
 
-def _pool(plan: Plan, values: np.ndarray, errors: np.ndarray) -> PooledEffect | NotEstimable:
-    return pool_effects(values, errors**2, **_choices(plan))
+def _clusters(frame: Frame) -> np.ndarray:
+    """A number for each counting estimate, equal for those that the plan says belong together."""
+    labels = [row.study if frame.plan.cluster == "study" else row.paper for row in frame.counting]
+    numbers = {label: number for number, label in enumerate(dict.fromkeys(labels))}
+    return np.array([numbers[label] for label in labels], dtype=np.int64)
 
 
-def _choices(plan: Plan) -> dict[str, Any]:
-    choices: dict[str, Any] = {"model": plan.model, "interval": plan.interval, "level": float(plan.level)}
-    if plan.heterogeneity is not None:
-        choices["heterogeneity"] = plan.heterogeneity
-    return choices
-
-
-def _pooled_json(frame: Frame, pooled: PooledEffect | NotEstimable) -> dict[str, Any]:
+def _pooled_json(frame: Frame, pooled: Pooled | NotEstimable) -> dict[str, Any]:
     if isinstance(pooled, NotEstimable):
         return {
             "effect": None,
@@ -96,31 +96,15 @@ def _pooled_json(frame: Frame, pooled: PooledEffect | NotEstimable) -> dict[str,
             "value": pooled.value,
             "standard_error": pooled.standard_error,
             "metric": frame.plan.metric,
-            "interval": _interval(pooled.interval),
+            "interval": interval_json(pooled.interval),
         },
         "reason": None,
-        "prediction_interval": _interval(pooled.prediction),
+        "prediction_interval": interval_json(pooled.prediction),
         "prediction_reason": pooled.prediction.reason if isinstance(pooled.prediction, NotEstimable) else None,
-        "heterogeneity": {
-            "tau_squared": pooled.tau2,
-            "tau_squared_interval": _interval(pooled.tau2_interval),
-            "i_squared": pooled.i_squared,
-            "i_squared_interval": _interval(pooled.i_squared_interval),
-            "h_squared": pooled.h_squared,
-            "diversity": pooled.diversity,
-            "q": pooled.q,
-            "q_df": pooled.q_df,
-            "q_p": pooled.q_p,
-        },
+        "heterogeneity": pooled.heterogeneity,
         "converged": pooled.converged,
         "iterations": pooled.iterations,
     }
-
-
-def _interval(interval: Interval | NotEstimable) -> dict[str, Any] | None:
-    if isinstance(interval, NotEstimable):
-        return None
-    return {"level": interval.level, "low": interval.low, "high": interval.high, "method": interval.method}
 
 
 def _counts(rows: tuple[FrameRow, ...]) -> dict[str, int]:
@@ -131,7 +115,7 @@ def _counts(rows: tuple[FrameRow, ...]) -> dict[str, int]:
     }
 
 
-def _flags(frame: Frame, pooled: PooledEffect | NotEstimable) -> list[dict[str, Any]]:
+def _flags(frame: Frame, pooled: Pooled | NotEstimable) -> list[dict[str, Any]]:
     rows = frame.counting
     flags: list[dict[str, Any]] = []
 
@@ -147,7 +131,7 @@ def _flags(frame: Frame, pooled: PooledEffect | NotEstimable) -> list[dict[str, 
         for code in pooled.flags:
             add(code)
         repeated = len(rows) - len({row.study for row in rows})
-        if repeated and frame.plan.dependence == "independent":
+        if repeated and frame.plan.dependence == INDEPENDENT:
             shared = _in_shared_studies(rows)
             add("dependence-ignored", shared)
         bounded = [row for row in rows if row.is_bounded]
@@ -172,7 +156,7 @@ def _in_shared_studies(rows: tuple[FrameRow, ...]) -> int:
     return sum(count for count in per_study.values() if count > 1)
 
 
-def _range_of_answer(frame: Frame, pooled: PooledEffect) -> list[float]:
+def _range_of_answer(frame: Frame, pooled: Pooled) -> list[float]:
     """The pooled value with every bounded standard error at its lower, and at its upper, end."""
     rows = frame.counting
     values = np.array([row.value for row in rows], dtype=float)
@@ -181,29 +165,29 @@ def _range_of_answer(frame: Frame, pooled: PooledEffect) -> list[float]:
         np.array([row.standard_error_low for row in rows], dtype=float),
         np.where([row.is_bounded for row in rows], SMALLEST_SHARE_OF_BOUND * high, 0.0),
     )
+    clusters = _clusters(frame)
     answers = [pooled.value]
     for errors in (low, high):
-        at_end = _pool(frame.plan, values, errors)
+        at_end = pool(frame.plan, values, errors, clusters)
         if not isinstance(at_end, NotEstimable):
             answers.append(at_end.value)
     return [min(answers), max(answers)]
 
 
-def _trail(frame: Frame, values: np.ndarray, errors: np.ndarray) -> list[dict[str, Any]]:
+def _trail(frame: Frame, values: np.ndarray, errors: np.ndarray, clusters: np.ndarray) -> list[dict[str, Any]]:
     """The protocol re-run after every date on which papers appeared; papers of one date enter together."""
     rows = frame.counting
-    dates = [frame.papers[row.paper].published_from for row in rows]
-    groups = np.array([date.toordinal() for date in dates], dtype=np.int64)
-    followed: Trail = trail(values, errors**2, groups, **_choices(frame.plan))
+    groups = np.array([frame.papers[row.paper].published_from.toordinal() for row in rows], dtype=np.int64)
     entering: dict[int, list[FrameRow]] = {}
     for row, group in zip(rows, groups.tolist(), strict=True):
         entering.setdefault(group, []).append(row)
     steps, papers, studies = [], set(), set()
-    for index in range(len(followed)):
-        step = followed.step(index)
+    for step in follow(frame.plan, values, errors, clusters, groups):
         new = entering[step.group]
         papers |= {row.paper for row in new}
         studies |= {row.study for row in new}
+        numbers = asdict(step)
+        del numbers["group"], numbers["flags"]
         steps.append(
             {
                 "published_from": frame.papers[new[0].paper].published_from.isoformat(),
@@ -218,18 +202,7 @@ def _trail(frame: Frame, values: np.ndarray, errors: np.ndarray) -> list[dict[st
                 ],
                 "papers": len(papers),
                 "studies": len(studies),
-                "estimates": step.k,
-                "value": step.value,
-                "standard_error": step.standard_error,
-                "low": step.low,
-                "high": step.high,
-                "prediction_low": step.prediction_low,
-                "prediction_high": step.prediction_high,
-                "tau_squared": step.tau2,
-                "i_squared": step.i_squared,
-                "q": step.q,
-                "q_p": step.q_p,
-                "converged": step.converged,
+                **numbers,
                 "flags": list(step.flags),
             }
         )

@@ -47,6 +47,12 @@ def disagreement(answer: AnswerView) -> list[tuple[str, str]]:
     lines = []
     if found["tau_squared"] is not None:
         lines.append(("Spread of true effects (τ)", _spread(answer, found)))
+    between, total = found["between_studies"], found["tau_squared"]
+    if between is not None and total:
+        cluster = answer.synthesis.protocol.plan["cluster"] if answer.synthesis is not None else "study"
+        plural = {"study": "studies", "paper": "papers"}[cluster]
+        text = f"{100 * between / total:.0f} / {100 * (total - between) / total:.0f}{NO_BREAK_SPACE}%"
+        lines.append((f"Of it between {plural} / within one", text))
     if found["i_squared"] is not None:
         text = share(round(found["i_squared"], 2))
         interval = found.get("i_squared_interval")

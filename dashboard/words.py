@@ -5,6 +5,7 @@ from typing import Any
 
 from analysis.effects import explain
 from analysis.frames import LEFT_OUT_WORDS
+from analysis.plans import THREE_LEVEL
 from dashboard.figures.numbers import MINUS
 from evidence.readings.vocabulary import Metric
 from evidence.vocabularies import Standing
@@ -57,16 +58,24 @@ def plan_in_words(plan: Mapping[str, Any]) -> list[tuple[str, str]]:
         ("Terms of a regression", _COVARIANCES[plan["covariance_policy"]]),
         ("Effects that depend on where one stands", _evaluation(plan["evaluation"])),
         ("Groups without events", _zero_cells(plan["zero_cells"])),
-        ("Estimates of one paper", "Taken as independent"),
+        _dependence(plan),
         ("Papers that count", ", ".join(Standing(code).label.lower() for code in plan["standings"])),
         ("One coding is enough", "yes" if plan["single_codings"] else "no"),
     ]
     return lines
 
 
+def _dependence(plan: Mapping[str, Any]) -> tuple[str, str]:
+    name = f"Estimates of one {plan['cluster']}"
+    if plan["dependence"] == THREE_LEVEL:
+        return name, "Belong together: true effects vary between and within them (three levels)"
+    return name, "Taken as independent"
+
+
 def plan_in_brief(plan: Mapping[str, Any]) -> str:
     """One sentence for the margin."""
-    model = _MODELS[plan["model"]].partition(":")[0]
+    nested = plan["dependence"] == THREE_LEVEL
+    model = "Three levels" if nested else _MODELS[plan["model"]].partition(":")[0]
     variance = f", {_HETEROGENEITY[plan['heterogeneity']]}" if plan.get("heterogeneity") else ""
     return f"{model}{variance}; interval by {_INTERVALS[plan['interval']]}, {share(plan['level'])}."
 

@@ -141,9 +141,7 @@ def paule_mandel(source: Source, k: int, q: float, reach: float, hint: float) ->
 
 
 @kernel
-def _root_of_slope(
-    source: Source, restricted: bool, low: float, high: float, start: float
-) -> tuple[float, bool, int]:
+def _root_of_slope(source: Source, restricted: bool, low: float, high: float, start: float) -> tuple[float, bool, int]:
     """Zero of the slope in an interval on which the likelihood is concave, rising at `low`, falling at `high`."""
     t = start
     for step in range(MOST_STEPS):
@@ -257,8 +255,14 @@ def likelihood_maximum(
         most_gain = (b - a) * max(0.0, da - eb)
         most_loss = (b - a) * max(0.0, ea - db)
         if (
-            gb > ha or (ga / hb) * (gb / hb) > ratio2 or gb - hb > most_gain or ga - ha > most_loss
-            or ga < hb or ratio2 * (ga / ha) * (gb / ha) < 1.0 or ha - ga > most_gain or hb - gb > most_loss
+            gb > ha
+            or (ga / hb) * (gb / hb) > ratio2
+            or gb - hb > most_gain
+            or ga - ha > most_loss
+            or ga < hb
+            or ratio2 * (ga / ha) * (gb / ha) < 1.0
+            or ha - ga > most_gain
+            or hb - gb > most_loss
         ):
             last -= 1
             continue
@@ -317,8 +321,17 @@ def likelihood_maximum(
 
 @kernel
 def between_study_variance(
-    source: Source, estimator: int, k: int, q: float, weight: float, trace_p: float,
-    sample_variance: float, mean_variance: float, smallest: float, reach: float, hint: float,
+    source: Source,
+    estimator: int,
+    k: int,
+    q: float,
+    weight: float,
+    trace_p: float,
+    sample_variance: float,
+    mean_variance: float,
+    smallest: float,
+    reach: float,
+    hint: float,
     work: np.ndarray,
 ) -> tuple[float, float, bool, int, int]:
     """τ² by the estimator of that code, for k ≥ 2: (τ², untruncated τ², converged, evaluations, maxima near the best).

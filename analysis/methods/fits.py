@@ -86,8 +86,18 @@ def fit_rows(effects: np.ndarray, variances: np.ndarray, estimator: int) -> np.n
     sums = at_zero
     if estimator != NO_TAU2:
         t, raw, converged, evaluations, near = between_study_variance(
-            source, estimator, count, at_zero.y_p_y, at_zero.weight, at_zero.trace_p,
-            squares_y / (count - 1.0), mean_v, smallest, (high - low) * (high - low), 0.0, workspace(),
+            source,
+            estimator,
+            count,
+            at_zero.y_p_y,
+            at_zero.weight,
+            at_zero.trace_p,
+            squares_y / (count - 1.0),
+            mean_v,
+            smallest,
+            (high - low) * (high - low),
+            0.0,
+            workspace(),
         )
         if t > 0.0:
             sums = sums_at(source, t)
@@ -196,8 +206,18 @@ def fit_prefixes(effects: np.ndarray, variances: np.ndarray, ends: np.ndarray, e
         if not uses_series:
             continue
         t, raw, converged, evaluations, near = between_study_variance(
-            source, estimator, k, q, weight, trace_p, squares_y / (k - 1.0), mean_v,
-            variances[top], (high - low) * (high - low), hint, work,
+            source,
+            estimator,
+            k,
+            q,
+            weight,
+            trace_p,
+            squares_y / (k - 1.0),
+            mean_v,
+            variances[top],
+            (high - low) * (high - low),
+            hint,
+            work,
         )
         fit[TAU2_UNTRUNCATED] = raw
         fit[CONVERGED] = 1.0 if converged else 0.0

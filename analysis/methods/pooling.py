@@ -266,8 +266,7 @@ def pool_effects(
         diversity=max(0.0, 1.0 - float(fit[WEIGHT] / fit[WEIGHT_AT_ZERO])),
         hartung_knapp_factor=float(intervals.factor[0]),
         log_likelihood=-0.5 * (k * math.log(2.0 * math.pi) + shared),
-        restricted_log_likelihood=-0.5
-        * ((k - 1) * math.log(2.0 * math.pi) + shared + math.log(float(fit[WEIGHT]))),
+        restricted_log_likelihood=-0.5 * ((k - 1) * math.log(2.0 * math.pi) + shared + math.log(float(fit[WEIGHT]))),
         k=k,
         weights=weights / weights.sum(),
         model=model,

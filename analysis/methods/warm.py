@@ -11,6 +11,7 @@ import time
 from .between_variance import ESTIMATORS
 from .compiled import cache_directory
 from .pooling import pool_effects
+from .three_level import METHODS, fit_three_level, three_level_trail
 from .trail import trail
 
 
@@ -23,6 +24,12 @@ def compile_all() -> float:
         pool_effects(effects, variances, tau2_interval=method)
     for estimator in ESTIMATORS:
         trail(effects, variances, [0, 1, 2, 3], heterogeneity=estimator)
+    papers = [0, 0, 1, 2]
+    design = [[1.0, 0.0], [1.0, 1.0], [1.0, 2.0], [1.0, 4.0]]
+    for method in METHODS:
+        fit_three_level(effects, variances, papers, method=method)
+        fit_three_level(effects, variances, papers, design, method=method)
+        three_level_trail(effects, variances, papers, [0, 1, 2, 3], method=method)
     return time.perf_counter() - started
 
 

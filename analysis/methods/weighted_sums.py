@@ -255,8 +255,18 @@ def _catch_up(source: Series, cell: int) -> None:
 
 @kernel
 def _combine(
-    top_weight: float, top_effect: float, centre: float,
-    a0: float, a1: float, a2: float, b0: float, b1: float, b2: float, c0: float, c1: float, c2: float,
+    top_weight: float,
+    top_effect: float,
+    centre: float,
+    a0: float,
+    a1: float,
+    a2: float,
+    b0: float,
+    b1: float,
+    b2: float,
+    c0: float,
+    c1: float,
+    c2: float,
     log_sum: float,
 ) -> Sums:
     """Join the top row to sums over the rest: a_q = Σw(y−c)^q, b_q = Σw²(y−c)^q, c_q = Σw³(y−c)^q."""
@@ -275,13 +285,13 @@ def _combine(
     rest_wz = b1 - e * b0
     rest_wzz = max(0.0, c2 - 2.0 * e * c1 + e * e * c0)
     off_centre = rest_wz - top_z * a0
-    y_ppp_y = max(
-        0.0, rest_wzz - 2.0 * top_z * rest_wz + top_z * top_z * a0 - off_centre * off_centre / weight
-    )
+    y_ppp_y = max(0.0, rest_wzz - 2.0 * top_z * rest_wz + top_z * top_z * a0 - off_centre * off_centre / weight)
     rest_shares_squared = b0 / (weight * weight)
     trace_p = a0 - b0 / weight + top_weight * rest_share
     trace_pp = (
-        b0 - 2.0 * c0 / weight + b0 * (top_share * top_share + rest_shares_squared)
+        b0
+        - 2.0 * c0 / weight
+        + b0 * (top_share * top_share + rest_shares_squared)
         + top_weight * top_weight * (rest_share * rest_share + rest_shares_squared)
     )
     return Sums(weight, mean, y_p_y, y_pp_y, y_ppp_y, trace_p, trace_pp, b0 + top_weight * top_weight, log_sum)
@@ -358,10 +368,18 @@ def _series_sums(source: Series, t: float) -> Sums:
     s = (cells[cell, ANCHOR] - t) / x
     if s == 0.0:
         return _combine(
-            1.0 / top_total, source.effects[top], cells[cell, CENTRE],
-            cells[cell, P] / x, cells[cell, Q] / x, cells[cell, R] / x,
-            cells[cell, P + 1] / xx, cells[cell, Q + 1] / xx, cells[cell, R + 1] / xx,
-            cells[cell, P + 2] / xxx, cells[cell, Q + 2] / xxx, cells[cell, R + 2] / xxx,
+            1.0 / top_total,
+            source.effects[top],
+            cells[cell, CENTRE],
+            cells[cell, P] / x,
+            cells[cell, Q] / x,
+            cells[cell, R] / x,
+            cells[cell, P + 1] / xx,
+            cells[cell, Q + 1] / xx,
+            cells[cell, R + 1] / xx,
+            cells[cell, P + 2] / xxx,
+            cells[cell, Q + 2] / xxx,
+            cells[cell, R + 2] / xxx,
             cells[cell, LOG_SUM] + np.log(top_total),
         )
     p0 = 0.0
@@ -386,8 +404,18 @@ def _series_sums(source: Series, t: float) -> Sums:
         r0 = r0 * s + cells[cell, R + j]
         logs = logs * s + cells[cell, P + j] * INVERSE[j]
     return _combine(
-        1.0 / top_total, source.effects[top], cells[cell, CENTRE],
-        p0 / x, q0 / x, r0 / x, p1 / xx, q1 / xx, r1 / xx, p2 / xxx, q2 / xxx, r2 / xxx,
+        1.0 / top_total,
+        source.effects[top],
+        cells[cell, CENTRE],
+        p0 / x,
+        q0 / x,
+        r0 / x,
+        p1 / xx,
+        q1 / xx,
+        r1 / xx,
+        p2 / xxx,
+        q2 / xxx,
+        r2 / xxx,
         cells[cell, LOG_SUM] - s * logs + np.log(top_total),
     )
 

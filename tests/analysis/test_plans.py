@@ -31,6 +31,8 @@ def test_an_empty_plan_has_every_default_written_out() -> None:
         {"standings": ["retracted", "current"], "single_codings": False},
         {"evaluation": {"at": {"exposure": "2.0", "distance to market": "3.5"}}},
         {"zero_cells": {"correction": "treatment-arm"}},
+        {"dependence": "three-level"},
+        {"dependence": "three-level", "cluster": "paper", "heterogeneity": "maximum-likelihood", "interval": "normal"},
         *({"metric": metric.value} for metric in Metric),
     ],
 )
@@ -62,7 +64,11 @@ def test_a_plan_reads_back_as_itself(data: dict[str, Any]) -> None:
         ({"standings": "current"}, "/plan/standings", "not-a-list"),
         ({"standings": ["lost"]}, "/plan/standings/0", "unknown-standing"),
         ({"single_codings": "yes"}, "/plan/single_codings", "not-yes-or-no"),
-        ({"dependence": "three-level"}, "/plan/dependence", "unknown-choice"),
+        ({"dependence": "nested"}, "/plan/dependence", "unknown-choice"),
+        ({"cluster": "author"}, "/plan/cluster", "unknown-choice"),
+        ({"dependence": "three-level", "model": "common-effect"}, "/plan/model", "contradiction"),
+        ({"dependence": "three-level", "interval": "hartung-knapp"}, "/plan/interval", "contradiction"),
+        ({"dependence": "three-level", "heterogeneity": "paule-mandel"}, "/plan/heterogeneity", "contradiction"),
     ],
 )
 def test_a_fault_is_named_with_its_place(data: dict[str, Any], pointer: str, code: str) -> None:

@@ -4,7 +4,6 @@ Expected values computed outside this project (NumPy, SciPy); sources of the for
 stand beside each table.
 """
 
-
 import numpy as np
 import pytest
 import statsmodels.api as sm
