@@ -152,6 +152,9 @@ AUTH_PASSWORD_VALIDATORS = [
     {"NAME": "django.contrib.auth.password_validation.CommonPasswordValidator"},
     {"NAME": "django.contrib.auth.password_validation.NumericPasswordValidator"},
 ]
+# Who `manage.py load_demo` lets sign in to the invented scenario; without a password it makes one up and prints it.
+DEMO_EMAIL = environment.text("STEELYARD_DEMO_EMAIL", "demo@steelyard.example")
+DEMO_PASSWORD = environment.text("STEELYARD_DEMO_PASSWORD")
 LOGIN_URL = "dashboard:sign-in"
 LOGIN_REDIRECT_URL = "dashboard:home"
 LOGOUT_REDIRECT_URL = "dashboard:sign-in"
@@ -345,10 +348,13 @@ CELERY_BEAT_SCHEDULE = {
 
 # --- Logging -----------------------------------------------------------------------------------------------
 
+# The file-backed queue has no host, and the transport warns at every connection that it makes one up.
+QUEUE_LOG_LEVEL = "ERROR" if CELERY_BROKER_URL.startswith("filesystem:") else "WARNING"
 LOGGING = {
     "version": 1,
     "disable_existing_loggers": False,
     "formatters": {"line": {"format": "%(asctime)s %(levelname)s %(name)s: %(message)s"}},
     "handlers": {"stderr": {"class": "logging.StreamHandler", "formatter": "line"}},
+    "loggers": {"kombu.connection": {"level": QUEUE_LOG_LEVEL}},
     "root": {"handlers": ["stderr"], "level": environment.text("STEELYARD_LOG_LEVEL", "INFO")},
 }

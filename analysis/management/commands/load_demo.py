@@ -5,7 +5,6 @@ printed. The first of them, a steward, signs in as STEELYARD_DEMO_EMAIL (else de
 """
 
 import json
-import os
 import secrets
 import time
 from typing import Any
@@ -42,12 +41,12 @@ class Command(BaseCommand):
 
     def _people(self, wanted: list[dict[str, str]]) -> dict[str, Person]:
         """The people of the scenario by their keys, created where they are not here yet."""
-        given = os.environ.get("STEELYARD_DEMO_PASSWORD", "")
+        given = settings.DEMO_PASSWORD
         password = given or secrets.token_urlsafe(12)
         people: dict[str, Person] = {}
         created = []
         for place, person in enumerate(wanted):
-            first = os.environ.get("STEELYARD_DEMO_EMAIL", f"demo@{DOMAIN}")
+            first = settings.DEMO_EMAIL
             email = (first if place == 0 else f"{person['key']}@{DOMAIN}").strip().lower()
             found = Person.objects.filter(email=email).first()
             if found is None:
