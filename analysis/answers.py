@@ -17,7 +17,7 @@ from analysis.engine import ENGINE
 from analysis.frames import Frame, evidence_frame
 from analysis.models import Answer, Effect, Protocol, RecomputeRequest, Synthesis
 from analysis.protocols import protocol_in_force
-from analysis.synthesis import Progress, SynthesisResult, quietly, synthesise
+from analysis.synthesis import STEPS, Progress, SynthesisResult, quietly, synthesise
 from analysis.wording import Displayed, Sentence, say
 from evidence.errors import NotHere
 from evidence.models import EvidenceBase, Question, QuestionRevision
@@ -107,7 +107,7 @@ def compute_answer(
     protocol = protocol_in_force(question, change)
     if protocol is None:
         raise NotHere(NO_PROTOCOL)
-    progress("reading the evidence", 0, 3)
+    progress("reading the evidence", 0, STEPS)
     frame = evidence_frame(revision, protocol, change)
     digest = frame.digest()
     stored = Synthesis.objects.filter(digest=digest).first()

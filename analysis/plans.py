@@ -32,6 +32,8 @@ INDEPENDENT, THREE_LEVEL = "independent", "three-level"
 DEPENDENCE = (INDEPENDENT, THREE_LEVEL)
 CLUSTERS = ("study", "paper")
 NESTED_HETEROGENEITY = ("restricted-maximum-likelihood", "maximum-likelihood")
+# What can be worked out beside the answer; `analysis.further` has a function for each.
+FURTHER = ("influence", "dependence")
 NESTED_INTERVALS = ("t", "normal")
 KEPT_STANDINGS = (Standing.CURRENT, Standing.CORRECTED, Standing.SUPERSEDED, Standing.RETRACTED)
 
@@ -54,6 +56,7 @@ class Plan:
     cluster: str = "study"
     standings: tuple[str, ...] = (Standing.CURRENT, Standing.CORRECTED)
     single_codings: bool = True
+    further: tuple[str, ...] = FURTHER
 
     @classmethod
     def read(cls, data: Mapping[str, Any], *, question_metric: str, pointer: str = "/plan") -> "Plan":
@@ -87,8 +90,11 @@ class Plan:
         problems += _standing_problems(pointer, given)
         if not isinstance(given.get("single_codings", True), bool):
             problems.append(FieldProblem(f"{pointer}/single_codings", "not-yes-or-no", "Say true or false."))
+        problems += _further_problems(pointer, given)
         if problems:
             raise Invalid(problems)
+        if "further" in given:
+            given["further"] = tuple(name for name in FURTHER if name in given["further"])
         if "zero_cells" in given:
             given["zero_cells"] = {**DEFAULT_ZERO_CELLS, **given["zero_cells"]}
         if "standings" in given:
@@ -99,8 +105,8 @@ class Plan:
 
     @classmethod
     def stored(cls, data: Mapping[str, Any]) -> "Plan":
-        """The plan of an adopted protocol."""
-        return cls(**{**data, "standings": tuple(data["standings"])})
+        """The plan of an adopted protocol. One adopted before there were further analyses has none."""
+        return cls(**{**data, "standings": tuple(data["standings"]), "further": tuple(data.get("further", ()))})
 
     def as_json(self) -> dict[str, Any]:
         return {
@@ -116,6 +122,7 @@ class Plan:
             "cluster": self.cluster,
             "standings": list(self.standings),
             "single_codings": self.single_codings,
+            "further": list(self.further),
         }
 
     def effect_plan(self, *, good_direction: str) -> EffectPlan:
@@ -269,3 +276,15 @@ def _standing_problems(pointer: str, given: Mapping[str, Any]) -> list[FieldProb
     if "standings" in given and not standings:
         problems.append(FieldProblem(here, "missing", "Name at least one standing, else no paper could count."))
     return problems
+
+
+def _further_problems(pointer: str, given: Mapping[str, Any]) -> list[FieldProblem]:
+    further = given.get("further", ())
+    here = f"{pointer}/further"
+    if not isinstance(further, list | tuple):
+        return [FieldProblem(here, "not-a-list", "further is a list of what is worked out beside the answer.")]
+    return [
+        FieldProblem(f"{here}/{place}", "unknown-choice", f"further names some of {', '.join(FURTHER)}; not {name!r}.")
+        for place, name in enumerate(further)
+        if name not in FURTHER
+    ]

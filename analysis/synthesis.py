@@ -11,6 +11,8 @@ import numpy as np
 
 from analysis.effects import Flag
 from analysis.frames import Frame, FrameRow, row_json
+from analysis.further import work_out
+from analysis.further.evidence import Evidence
 from analysis.methods import FLAGS, NotEstimable
 from analysis.methods.three_level import FLAGS as THREE_LEVEL_FLAGS
 from analysis.plans import INDEPENDENT
@@ -32,6 +34,9 @@ FLAG_WORDS = {
 # Where nothing printed keeps a standard error from being zero, the lower end of the answer's range takes this share of
 # its upper bound, for a weight cannot be infinite.
 SMALLEST_SHARE_OF_BOUND = 1e-3
+
+STEPS = 4
+"""Reading the evidence, pooling, following the trail, further analyses."""
 
 Progress = Callable[[str, int, int], None]
 
@@ -55,16 +60,21 @@ def synthesise(frame: Frame, progress: Progress = quietly) -> SynthesisResult:
     rows = frame.counting
     values = np.array([row.value for row in rows], dtype=float)
     errors = np.array([row.standard_error for row in rows], dtype=float)
-    progress("pooling", 1, 3)
+    progress("pooling", 1, STEPS)
     clusters = _clusters(frame)
     pooled = pool(frame.plan, values, errors, clusters)
-    progress("trail", 2, 3)
+    progress("trail", 2, STEPS)
     steps = _trail(frame, values, errors, clusters)
     weights = {}
     if not isinstance(pooled, NotEstimable):
         weights = dict(zip((row.estimate for row in rows), pooled.weights.tolist(), strict=True))
     return SynthesisResult(
-        result={**_pooled_json(frame, pooled), "counts": _counts(rows), "flags": _flags(frame, pooled)},
+        result={
+            **_pooled_json(frame, pooled),
+            "counts": _counts(rows),
+            "flags": _flags(frame, pooled),
+            "further": _further(frame, pooled, values, errors, clusters, progress),
+        },
         trail=steps,
         rows=[row_json(row, weights.get(row.estimate)) for row in frame.rows],
         papers={
@@ -72,6 +82,27 @@ def synthesise(frame: Frame, progress: Progress = quietly) -> SynthesisResult:
             for paper, facts in frame.papers.items()
         },
     )
+
+
+def _further(
+    frame: Frame,
+    pooled: Pooled | NotEstimable,
+    values: np.ndarray,
+    errors: np.ndarray,
+    clusters: np.ndarray,
+    progress: Progress,
+) -> list[dict[str, Any]]:
+    if isinstance(pooled, NotEstimable):
+        return []
+    progress("further analyses", 3, STEPS)
+    labels: dict[int, str] = {}
+    for row, cluster in zip(frame.counting, clusters.tolist(), strict=True):
+        name = row.study_label if frame.plan.cluster == "study" else frame.papers[row.paper].label
+        labels.setdefault(cluster, name)
+    evidence = Evidence(
+        frame.question, frame.plan, values, errors, clusters, tuple(labels[n] for n in range(len(labels))), pooled
+    )
+    return list(work_out(evidence))
 
 
 def _clusters(frame: Frame) -> np.ndarray:

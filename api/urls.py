@@ -67,6 +67,7 @@ urlpatterns: list[URLPattern] = [
     path(f"{_QUESTION}eligibility/", questions.Eligibility.as_view(), name="eligibility"),
     path(f"{_QUESTION}answer/", answers.Answer.as_view(), name="answer"),
     path(f"{_QUESTION}trail/", answers.Trail.as_view(), name="trail"),
+    path(f"{_QUESTION}further/", answers.Further.as_view(), name="further"),
     path(f"{_QUESTION}effects/", answers.QuestionEffects.as_view(), name="question-effects"),
     path(f"{_QUESTION}syntheses/", answers.Syntheses.as_view(), name="syntheses"),
     path(f"{_BASE}syntheses/<digest:digest>/", answers.OneSynthesis.as_view(), name="synthesis"),

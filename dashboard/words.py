@@ -45,6 +45,12 @@ _CORRECTIONS = {
 }
 
 
+_FURTHER = {
+    "influence": "the answer without each study",
+    "dependence": "other ways to treat several estimates of one study",
+}
+
+
 def plan_in_words(plan: Mapping[str, Any]) -> list[tuple[str, str]]:
     """Every choice of a protocol: what it is about, and what was chosen."""
     lines = [
@@ -61,6 +67,7 @@ def plan_in_words(plan: Mapping[str, Any]) -> list[tuple[str, str]]:
         _dependence(plan),
         ("Papers that count", ", ".join(Standing(code).label.lower() for code in plan["standings"])),
         ("One coding is enough", "yes" if plan["single_codings"] else "no"),
+        ("Worked out beside the answer", ", ".join(_FURTHER[name] for name in plan.get("further", ())) or "nothing"),
     ]
     return lines
 

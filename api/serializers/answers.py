@@ -2,6 +2,7 @@
 
 from typing import Any
 
+from drf_spectacular.utils import extend_schema_field
 from rest_framework import serializers
 
 from analysis.answers import CAUTIONS, AnswerView
@@ -182,6 +183,61 @@ class TrailOut(Out):
             "preliminary": answer.preliminary,
             "reason": answer.reason,
             "steps": answer.synthesis.trail if answer.synthesis is not None else [],
+        }
+
+
+class FindingColumnOut(Out):
+    name = serializers.CharField()
+    label = serializers.CharField()
+    kind = serializers.ChoiceField(
+        [
+            ("text", "A text"),
+            ("effect", "An effect, in the metric of the answer"),
+            ("number", "A number"),
+            ("count", "A whole number"),
+            ("p", "A p value"),
+        ]
+    )
+
+
+@extend_schema_field({"type": "array", "items": {"type": "array", "items": {"type": ["string", "number", "null"]}}})
+class CellsField(serializers.ListField):
+    """Rows of cells, one for each column; null where a number is not estimable."""
+
+
+class FindingOut(Out):
+    """What a further analysis found: a reading and its table, or the reason why there is none."""
+
+    code = serializers.CharField()
+    title = serializers.CharField()
+    reading = serializers.CharField()
+    columns = FindingColumnOut(many=True)
+    rows = CellsField()
+    flags = serializers.ListField(child=serializers.CharField())
+    reason = serializers.CharField(allow_null=True)
+
+
+class FurtherOut(Out):
+    """What the protocol has worked out beside the answer."""
+
+    question = serializers.CharField()
+    as_of = MomentOut()
+    metric = serializers.ChoiceField(METRIC_CHOICES)
+    synthesis = serializers.CharField(allow_null=True)
+    preliminary = serializers.BooleanField()
+    reason = serializers.CharField(allow_null=True)
+    findings = FindingOut(many=True)
+
+    @classmethod
+    def content(cls, answer: AnswerView) -> dict[str, Any]:
+        return {
+            "question": answer.question.question.slug,
+            "as_of": as_json(answer.moment),
+            "metric": _metric(answer),
+            "synthesis": name_of(answer.synthesis),
+            "preliminary": answer.preliminary,
+            "reason": answer.reason,
+            "findings": answer.result.get("further", []),
         }
 
 

@@ -12,6 +12,7 @@ from analysis.plans import (
     CLUSTERS,
     COVARIANCE_POLICIES,
     DEPENDENCE,
+    FURTHER,
     HETEROGENEITY,
     INTERVALS,
     KEPT_STANDINGS,
@@ -184,6 +185,7 @@ PLAN: Schema = {
         "cluster": _word(CLUSTERS),
         "standings": {"type": "array", "minItems": 1, "items": _word(KEPT_STANDINGS)},
         "single_codings": {"type": "boolean"},
+        "further": {"type": "array", "items": _word(FURTHER), "description": "What is worked out beside the answer."},
     },
 }
 

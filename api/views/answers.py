@@ -14,6 +14,7 @@ from api.serializers.answers import (
     AnswerInHistoryOut,
     AnswerOut,
     EffectOut,
+    FurtherOut,
     RowOut,
     SynthesisOut,
     TrailOut,
@@ -51,6 +52,14 @@ class Trail(AnswerReader):
     @operation("Read the trail of a question", name="read_trail", gives=TrailOut, as_of=True)
     def get(self, request: Request, base: str, slug: str) -> Response:
         return self.one(TrailOut, TrailOut.content(self.answer(slug)))
+
+
+class Further(AnswerReader):
+    """What the protocol has worked out beside the answer: each with its reading and its table."""
+
+    @operation("Read the further analyses of a question", name="read_further", gives=FurtherOut, as_of=True)
+    def get(self, request: Request, base: str, slug: str) -> Response:
+        return self.one(FurtherOut, FurtherOut.content(self.answer(slug)))
 
 
 class QuestionEffects(AnswerReader):

@@ -16,6 +16,7 @@ from dashboard.figures.forest import Forest, forest_figure, forest_table
 from dashboard.figures.stylesheet import standalone
 from dashboard.figures.tables import Table, as_csv
 from dashboard.figures.trail import Trail, clipped, trail_figure, trail_table
+from dashboard.findings import sections_of
 from dashboard.health import (
     counts_in_words,
     direction_in_words,
@@ -59,6 +60,7 @@ def question(request: HttpRequest, visit: Visit, slug: str) -> HttpResponse:
         "cautions": CAUTIONS,
         "health": disagreement(answer),
         "flags": flags_in_words(answer),
+        "sections": sections_of(answer),
         "protocol_in_words": plan_in_brief(answer.protocol.plan) if answer.protocol else "None has been adopted yet.",
         "direction_in_words": direction_in_words(answer.question),
         "papers": _papers(answer),

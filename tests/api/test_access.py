@@ -34,6 +34,7 @@ NEEDS: dict[str, dict[str, Scope]] = {
     "eligibility": {"GET": READ, "POST": REVIEW},
     "answer": {"GET": READ},
     "trail": {"GET": READ},
+    "further": {"GET": READ},
     "question-effects": {"GET": READ},
     "syntheses": {"GET": READ},
     "synthesis": {"GET": READ},

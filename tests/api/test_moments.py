@@ -73,8 +73,28 @@ def test_the_past_reads_byte_for_byte_as_it_did_whatever_happens_since(answered:
 def test_the_present_did_change_meanwhile(answered: Answered, client: Program) -> None:
     """The twin of the test above, which would also pass if nothing ever changed."""
     things = something_everywhere(client, answered)
-    changing = {"question", "protocols", "eligibility", "answer", "trail", "papers", "paper", "studies", "study"}
-    changing |= {"question-effects", "estimates", "estimate", "codings", "changes", "paper-revisions", "evidence-base"}
+    changing = {
+        "question",
+        "protocols",
+        "eligibility",
+        "answer",
+        "trail",
+        "further",
+        "papers",
+        "paper",
+        "studies",
+        "study",
+    }
+    changing |= {
+        "further",
+        "question-effects",
+        "estimates",
+        "estimate",
+        "codings",
+        "changes",
+        "paper-revisions",
+        "evidence-base",
+    }
     routes = [route for route in READS if route.name in changing]
     before = {route.name: client.get(route.path(things)).content for route in routes}
     change_everything(client, answered)
@@ -173,6 +193,6 @@ def test_a_request_is_polled_by_its_etag_until_it_is_done(answered: Answered, cl
     assert run(added.change.requests[0].id)
     done = client.get(path, headers={"If-None-Match": waiting["ETag"]})
     assert (done.status_code, done.json()["state"], done.json()["attempts"]) == (200, "done", 1)
-    assert done.json()["progress"] == {"done": 3, "total": 3, "phase": ""}
+    assert done.json()["progress"] == {"done": 4, "total": 4, "phase": ""}
     assert client.get(done.json()["links"]["synthesis"]).status_code == 200
     assert client.get(done.json()["links"]["answer"]).json()["papers"] == 4

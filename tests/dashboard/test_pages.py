@@ -79,13 +79,27 @@ def test_cautions_and_flags_stand_by_the_answer(answered, look):
 def test_every_figure_stands_on_the_page_with_its_table(answered, look):
     answer = _answer(answered)
     shown = page(look(answered.access, "question", "messages"))
-    trail, forest = [details.table() for details in shown.every("details", class_="data")]
+    trail, forest, *_ = [details.table() for details in shown.every("details", class_="data")]
     measure, show = measure_of(answer), shown_by(answer)
     steps = answer.synthesis.trail
     assert [row[4] for row in trail[1:]] == [measure.write_bare(show(step["value"])) for step in steps]
     assert [row[0] for row in forest[1:4]] == ["Paper"[:5] + row["label"][5:] for row in _papers_in_order(answer)]
     assert [row[2] for row in forest[1:4]] == [measure.write_bare(show(row["value"])) for row in answer.synthesis.rows]
     assert len(shown.every("svg", role="img")) == 4
+
+
+def test_what_was_worked_out_beside_the_answer_is_told_and_tabled(answered, look):
+    answer = _answer(answered)
+    shown = page(look(answered.access, "question", "messages"))
+    influence, dependence = answer.result["further"]
+    words = shown.one("main").words
+    assert influence["title"] in words
+    assert influence["reading"] in words
+    assert dependence["reason"] in words
+    *_, table = [details.table() for details in shown.every("details", class_="data")]
+    measure, show = measure_of(answer), shown_by(answer)
+    assert [row[0] for row in table[1:]] == [row[0] for row in influence["rows"]]
+    assert [row[2] for row in table[1:]] == [measure.write_bare(show(row[2])) for row in influence["rows"]]
 
 
 def _papers_in_order(answer):
@@ -181,8 +195,8 @@ def test_pending_work_survives_a_reload_and_reports_its_progress(answered, look)
     assert client.get(address).json() == {
         "state": "done",
         "words": f"Worked out as of change {_newest(answered)}.",
-        "done": 3,
-        "total": 3,
+        "done": 4,
+        "total": 4,
         "ended": True,
     }
     assert request.pk == RecomputeRequest.objects.get(question=answered.question).pk
