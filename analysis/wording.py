@@ -69,6 +69,10 @@ class Displayed:
         """A number with this answer's decimals and unit."""
         return _with_unit(_number(number, self.decimals, signed=signed), self.unit)
 
+    def end(self, number: float, *, signed: bool = False) -> str:
+        """A further number of the same sentence: a sign such as % goes with each, a unit in words is said once."""
+        return _with_unit(_number(number, self.decimals, signed=signed), self.unit if self.unit == "%" else "")
+
 
 @dataclass(frozen=True)
 class Sentence:
@@ -117,9 +121,9 @@ def say(question: QuestionRevision, result: Mapping[str, Any] | None, reason: st
                 ),
                 (shown.text(shown.value, signed=True), True),
                 (", most likely between ", False),
-                (shown.text(shown.low, signed=True), True),
+                (shown.end(shown.low, signed=True), True),
                 (" and ", False),
-                (shown.text(shown.high, signed=True), True),
+                (shown.end(shown.high, signed=True), True),
                 (".", False),
             ),
             shown,
@@ -130,9 +134,9 @@ def say(question: QuestionRevision, result: Mapping[str, Any] | None, reason: st
             (f"On average, {subject} {raises if shown.value > 0 else lowers} {outcome} by ", False),
             (shown.text(abs(shown.value)), True),
             (", most likely between ", False),
-            (shown.text(near), True),
+            (shown.end(near), True),
             (" and ", False),
-            (shown.text(far), True),
+            (shown.end(far), True),
             (".", False),
         ),
         shown,
@@ -154,9 +158,9 @@ def _correlation(question: QuestionRevision, shown: Displayed) -> Sentence:
             (start, False),
             (shown.text(shown.value, signed=True), True),
             (", most likely between ", False),
-            (shown.text(shown.low, signed=True), True),
+            (shown.end(shown.low, signed=True), True),
             (" and ", False),
-            (shown.text(shown.high, signed=True), True),
+            (shown.end(shown.high, signed=True), True),
             (".", False),
         ),
         shown,
@@ -164,13 +168,13 @@ def _correlation(question: QuestionRevision, shown: Displayed) -> Sentence:
 
 
 def _decimals(*numbers: float) -> int:
-    """Decimals that keep two significant digits of the interval's width, between none and six."""
+    """The fewest decimals, at most six, whose last place is no more than an eighth of the interval's width."""
     width = max(numbers) - min(numbers)
     if width <= 0.0:
         width = max((abs(number) for number in numbers), default=0.0)
     if width <= 0.0:
         return 1
-    return min(6, max(0, 1 - math.floor(math.log10(width))))
+    return min(6, max(0, -math.floor(math.log10(width / 8))))
 
 
 def _number(number: float, decimals: int, *, signed: bool = False) -> str:

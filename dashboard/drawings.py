@@ -1,7 +1,8 @@
 """From an answer to the descriptions that `figures/` draws, on the scale a reader sees.
 
 The numbers are those of the stored synthesis; nothing is estimated here but the interval of a single estimate, which is
-its standard error times the normal quantile of the protocol's level, as forest plots have it.
+its standard error times the normal quantile of the protocol's level, as forest plots have it, and the average of a
+paper whose estimates are too many to be drawn one by one.
 """
 
 import math
@@ -15,6 +16,7 @@ from typing import Any
 from django.utils.safestring import SafeString, mark_safe
 
 from analysis.answers import AnswerView
+from analysis.methods.one_per_paper import one_per_paper
 from analysis.wording import scale_of
 from dashboard.figures.forest import (
     Forest,
@@ -23,9 +25,8 @@ from dashboard.figures.forest import (
     forest_figure,
     forest_sentence,
     forest_table,
-    heaviest_papers,
 )
-from dashboard.figures.numbers import Measure
+from dashboard.figures.numbers import Measure, write_count
 from dashboard.figures.tables import Table
 from dashboard.figures.trail import (
     PaperMark,
@@ -156,12 +157,52 @@ def draw_forest(forest: Forest) -> Drawn:
     )
 
 
-def part_for_page(forest: Forest) -> Forest:
-    """The forest itself when it fits a page, else its heaviest papers, saying how many estimates there are."""
-    if len(forest.rows) <= ROWS_ON_THE_PAGE:
+def forest_for_page(answer: AnswerView, forest: Forest) -> Forest:
+    """The forest itself when it fits a page, else one row a paper: the heaviest, each at the average of its estimates.
+
+    The average is by precision. Its interval is the widest there can be, as if the estimates of the paper were
+    perfectly correlated, since how far they are is not known.
+    """
+    if len(forest.rows) <= ROWS_ON_THE_PAGE or answer.synthesis is None:
         return forest
-    kept = heaviest_papers(forest.rows, ROWS_ON_THE_PAGE)
-    return Forest(forest.measure, kept, forest.pooled, forest.level, total=len(forest.rows))
+    counting = [row for row in answer.synthesis.rows if not row["left_out"]]
+    averages = one_per_paper(
+        [row["value"] for row in counting],
+        [row["standard_error"] ** 2 for row in counting],
+        [row["paper"] for row in counting],
+        correlation=1.0,
+    )
+    weights: Counter[str] = Counter()
+    for row in counting:
+        weights[row["paper"]] += row["weight"] or 0.0
+    show, labels = shown_by(answer), paper_labels(answer.synthesis.papers)
+    quantile = NormalDist().inv_cdf(0.5 + forest.level / 2)
+    rows = []
+    for paper, value, variance, count in zip(
+        averages.papers.tolist(), averages.effects, averages.variances, averages.count, strict=True
+    ):
+        half = quantile * math.sqrt(variance)
+        rows.append(
+            ForestRow(
+                paper=f"{labels[paper]}, {write_count(int(count), 'estimate')}",
+                place="",
+                value=show(float(value)),
+                low=show(float(value - half)),
+                high=show(float(value + half)),
+                weight=weights[paper],
+            )
+        )
+    heaviest = sorted(rows, key=lambda row: -row.weight)[:ROWS_ON_THE_PAGE]
+    kept = tuple(row for row in rows if row in heaviest)
+    return Forest(
+        forest.measure,
+        kept,
+        forest.pooled,
+        forest.level,
+        total=len(forest.rows),
+        averaged=True,
+        papers_in_all=len(rows),
+    )
 
 
 def paper_labels(papers: dict[str, dict[str, str]]) -> dict[str, str]:

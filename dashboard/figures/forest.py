@@ -5,7 +5,6 @@ weight, a line for its interval, a diamond as wide as the interval of the pooled
 difference. Below the diamond a bar shows the prediction interval. A whisker that leaves the axis ends in an arrow.
 """
 
-from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from itertools import groupby
 
@@ -45,6 +44,7 @@ class Forest:
     """Rows in the order they are drawn, those of one paper together. pooled is None where nothing was pooled.
 
     total: how many estimates the synthesis has, when `rows` is only a part of them.
+    averaged: each row is the average of one paper's estimates; papers_in_all: of how many papers these are.
     """
 
     measure: Measure
@@ -52,6 +52,8 @@ class Forest:
     pooled: PooledRow | None
     level: float
     total: int | None = None
+    averaged: bool = False
+    papers_in_all: int | None = None
 
     def __post_init__(self) -> None:
         if not self.rows:
@@ -155,17 +157,22 @@ def _numbers(measure: Measure, value: float, low: float, high: float) -> str:
 def forest_sentence(forest: Forest) -> str:
     """What the figure shows, in words."""
     measure = forest.measure
-    counted = f"{write_count(len(forest.papers), 'paper')}, {write_count(len(forest.rows), 'estimate')}"
-    if forest.is_part:
-        counted += f" of {forest.total}"
+    counted = write_count(len(forest.papers), "paper")
+    if forest.averaged:
+        if forest.papers_in_all is not None and forest.papers_in_all > len(forest.rows):
+            counted += f" of {forest.papers_in_all}, those with most weight"
+    else:
+        counted += f", {write_count(len(forest.rows), 'estimate')}"
+        counted += f" of {forest.total}" if forest.is_part else ""
+    noun = "average" if forest.averaged else "estimate"
     least = min(row.value for row in forest.rows)
     most = max(row.value for row in forest.rows)
     null = measure.null_in_words
     including = sum(row.low <= measure.null <= row.high for row in forest.rows)
     if len(forest.rows) == 1:
-        found = f"the estimate is {measure.write(least)}"
+        found = f"the {noun} is {measure.write(least)}"
     else:
-        found = f"the estimates run from {measure.write(least)} to {measure.write(most)}"
+        found = f"the {noun}s run from {measure.write(least)} to {measure.write(most)}"
     tail = f"{including} of {len(forest.rows)} intervals include {null}"
     if forest.pooled is None:
         return f"{counted}: {found}, and {tail}. Nothing was pooled."
@@ -207,22 +214,6 @@ def forest_table(forest: Forest) -> Table:
         if pooled.prediction_low is not None and pooled.prediction_high is not None:
             add("One new setting", "", (None, pooled.prediction_low, pooled.prediction_high), None, "")
     return Table(forest.title, columns, tuple(rows), tuple(written))
-
-
-def heaviest_papers(rows: Iterable[ForestRow], room: int) -> tuple[ForestRow, ...]:
-    """The rows of the papers with most weight, whole papers only, at most `room` rows but at least one paper.
-
-    Their order is kept.
-    """
-    papers = [(name, list(group)) for name, group in groupby(rows, key=lambda row: row.paper)]
-    ranked = sorted(papers, key=lambda paper: -sum(row.weight for row in paper[1]))
-    kept: set[str] = set()
-    used = 0
-    for name, group in ranked:
-        if not kept or used + len(group) <= room:
-            kept.add(name)
-            used += len(group)
-    return tuple(row for name, group in papers if name in kept for row in group)
 
 
 def _value_range(forest: Forest) -> tuple[float, float]:

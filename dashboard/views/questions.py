@@ -11,7 +11,7 @@ from analysis.answers import CAUTIONS, AnswerView, answer_at
 from analysis.models import RecomputeRequest
 from analysis.protocols import protocol_in_force, protocol_numbered, protocols_at
 from dashboard.access import Visit, visiting
-from dashboard.drawings import draw_forest, draw_trail, forest_of, paper_labels, part_for_page, trail_of
+from dashboard.drawings import draw_forest, draw_trail, forest_for_page, forest_of, paper_labels, trail_of
 from dashboard.figures.forest import Forest, forest_figure, forest_table
 from dashboard.figures.stylesheet import standalone
 from dashboard.figures.tables import Table, as_csv
@@ -68,7 +68,7 @@ def question(request: HttpRequest, visit: Visit, slug: str) -> HttpResponse:
     if trail is not None:
         context |= {"trail": draw_trail(trail), "trail_clock": trail.clock, "trail_is_clipped": clipped(trail)}
     if forest is not None:
-        part = part_for_page(forest)
+        part = forest_for_page(answer, forest)
         context |= {"forest": draw_forest(part), "forest_part": part, "level": share(forest.level)}
     return render(request, "dashboard/question.html", context)
 

@@ -65,7 +65,25 @@ def test_a_correlation_is_said_as_going_together() -> None:
 
 
 def test_units_of_the_question_are_used_where_the_metric_has_none() -> None:
-    assert plain(question(unit="days"), result(1.5, 0.4, 2.6, "mean-difference"), None).count(" days") == 3
+    assert (
+        plain(question(unit="days"), result(1.5, 0.4, 2.6, "mean-difference"), None)
+        == "On average, messages raise farm-gate revenue by 1.5 days, most likely between 0.4 and 2.6."
+    )
+
+
+@pytest.mark.parametrize(
+    ("limits", "shown"),
+    [((0.0402, 0.0357, 0.0447), "by 4.0 %, most likely between 3.6 % and 4.5 %"),
+     ((0.51, 0.27, 0.67), "by 51 %, most likely between 27 % and 67 %"),
+     ((0.00402, 0.00382, 0.00422), "by 0.402 %, most likely between 0.382 % and 0.422 %")],
+)  # fmt: skip
+def test_no_more_decimals_are_shown_than_the_interval_earns(limits: tuple[float, ...], shown: str) -> None:
+    assert shown in plain(question(), result(*limits), None)
+
+
+def test_a_unit_in_words_is_said_once() -> None:
+    sentence = plain(question(), result(0.09, 0.078, 0.103, "standardised-mean-difference"), None)
+    assert sentence.count("standard deviations") == 1
 
 
 def test_without_an_effect_the_reason_is_the_sentence() -> None:

@@ -9,7 +9,7 @@ from django.test.utils import CaptureQueriesContext
 from django.urls import reverse
 from django.utils import timezone
 
-from analysis.answers import CAUTIONS, answer_at
+from analysis.answers import CAUTIONS, answer_at, compute_answer
 from analysis.models import RecomputeRequest
 from analysis.recompute import run
 from dashboard.drawings import measure_of, shown_by
@@ -86,6 +86,24 @@ def test_every_figure_stands_on_the_page_with_its_table(answered, look):
     assert [row[0] for row in forest[1:4]] == ["Paper"[:5] + row["label"][5:] for row in _papers_in_order(answer)]
     assert [row[2] for row in forest[1:4]] == [measure.write_bare(show(row["value"])) for row in answer.synthesis.rows]
     assert len(shown.every("svg", role="img")) == 4
+
+
+def test_many_estimates_are_drawn_as_one_line_a_paper(look):
+    filled = a_question_with_an_answer()
+    readings = [ready_made(f"0.{tenth}", "0.10") for tenth in range(10, 45)]
+    a_paper(filled.access, *(an_estimate(reading) for reading in readings), label="Long 2021", published_on="2021")
+    compute_answer(filled.question, _newest(filled))
+    shown = page(look(filled.access, "question", "messages"))
+    _, forest, *_ = [details.table() for details in shown.every("details", class_="data")]
+    names = [row[0] for row in forest[1:]]
+    assert names[3] == "Long 2021, 35\N{NO-BREAK SPACE}estimates"
+    assert len(names) == 4 + 2  # four papers, the pooled effect and one new setting
+    # Equal errors: the plain mean of 0.10 to 0.44, and one error's width as if all were perfectly correlated.
+    answer = _answer(filled)
+    measure, show = measure_of(answer), shown_by(answer)
+    low, high = 0.27 - 1.959963984540054 * 0.1, 0.27 + 1.959963984540054 * 0.1
+    assert forest[4][2:5] == [measure.write_bare(show(number)) for number in (0.27, low, high)]
+    assert "All 38 estimates" in shown.one("main").words
 
 
 def test_what_was_worked_out_beside_the_answer_is_told_and_tabled(answered, look):

@@ -13,7 +13,6 @@ from dashboard.figures.forest import (
     forest_figure,
     forest_sentence,
     forest_table,
-    heaviest_papers,
 )
 from dashboard.figures.numbers import Measure
 
@@ -157,11 +156,11 @@ def test_a_part_says_how_many_there_are_in_all():
     assert "Pooled effect, all 3 estimates" in texts(parse(forest_figure(part, ident="f")))
 
 
-def test_whole_papers_are_kept_by_weight_in_their_order():
-    assert heaviest_papers(ROWS, 2) == ROWS[:2] or heaviest_papers(ROWS, 2) == ROWS[2:]
-    light = ForestRow("Light 2000", "", 1.0, 0.0, 2.0, 0.01)
-    assert heaviest_papers((light, *ROWS), 3) == ROWS
-    assert heaviest_papers(ROWS[:2], 1) == ROWS[:2]  # one paper is always kept whole
+def test_averages_of_papers_are_called_so():
+    averages = replace(FOREST, rows=ROWS[:2], total=9, averaged=True, papers_in_all=5)
+    sentence = forest_sentence(averages)
+    assert "of 5, those with most weight: the average" in sentence
+    assert "estimates run" not in sentence
 
 
 def test_hostile_labels_are_text_and_nothing_else():
