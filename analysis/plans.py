@@ -33,7 +33,7 @@ DEPENDENCE = (INDEPENDENT, THREE_LEVEL)
 CLUSTERS = ("study", "paper")
 NESTED_HETEROGENEITY = ("restricted-maximum-likelihood", "maximum-likelihood")
 # What can be worked out beside the answer; `analysis.further` has a function for each.
-FURTHER = ("influence", "dependence")
+FURTHER = ("influence", "dependence", "lopsided")
 NESTED_INTERVALS = ("t", "normal")
 KEPT_STANDINGS = (Standing.CURRENT, Standing.CORRECTED, Standing.SUPERSEDED, Standing.RETRACTED)
 

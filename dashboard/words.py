@@ -48,6 +48,7 @@ _CORRECTIONS = {
 _FURTHER = {
     "influence": "the answer without each study",
     "dependence": "other ways to treat several estimates of one study",
+    "lopsided": "tests for selective publication",
 }
 
 

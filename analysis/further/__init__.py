@@ -12,10 +12,12 @@ from analysis.further.dependence import dependence
 from analysis.further.evidence import Evidence
 from analysis.further.findings import Finding
 from analysis.further.influence import influence
+from analysis.further.lopsided import lopsided
 
 ANALYSES: dict[str, Callable[[Evidence], Finding]] = {
     "influence": influence,
     "dependence": dependence,
+    "lopsided": lopsided,
 }
 
 

@@ -11,8 +11,12 @@ import time
 from .between_variance import ESTIMATORS
 from .compiled import cache_directory
 from .pooling import pool_effects
+from .robust import robust_fit
+from .selection_model import selection_model
+from .small_study_tests import rank_correlation_test
 from .three_level import METHODS, fit_three_level, three_level_trail
 from .trail import trail
+from .trim_and_fill import trim_and_fill
 
 
 def compile_all() -> float:
@@ -30,6 +34,11 @@ def compile_all() -> float:
         fit_three_level(effects, variances, papers, method=method)
         fit_three_level(effects, variances, papers, design, method=method)
         three_level_trail(effects, variances, papers, [0, 1, 2, 3], method=method)
+    robust_fit(effects, [1.0, 2.0, 1.0, 1.0], papers)
+    robust_fit(effects, [1.0, 2.0, 1.0, 1.0], papers, design)
+    rank_correlation_test(effects, variances)
+    trim_and_fill(effects, variances)
+    selection_model([0.1, 0.5, -0.2, 0.9, 0.3], [0.01, 0.04, 0.02, 0.03, 0.02])
     return time.perf_counter() - started
 
 

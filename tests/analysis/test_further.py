@@ -91,3 +91,27 @@ def test_a_three_level_plan_is_refitted_as_such() -> None:
     as_planned, nested = dependence["rows"][0], dependence["rows"][2]
     np.testing.assert_allclose(as_planned[1], 0.18471316, rtol=1e-6)
     assert nested[1:] == as_planned[1:]
+
+
+def test_lopsidedness_of_a_literature_made_with_selection() -> None:
+    """40 estimates simulated with selection for significance; every number computed independently of this project."""
+    y, v = data_set("bias40")
+    found = finding("lopsided", evidence(y, v, range(40)))
+    table = {row[0]: row[1:] for row in found["rows"]}
+    np.testing.assert_allclose(table["Funnel asymmetry"][0], 0.195748829792, rtol=1e-9)
+    np.testing.assert_allclose(table["Rank correlation"][0], 0.624418189423, rtol=1e-9)
+    np.testing.assert_allclose(table["Excess of significant estimates"][0], 0.0227104858639, rtol=1e-9)
+    np.testing.assert_allclose(table["Step-function selection model"][0], 0.00066838413, rtol=1e-5)
+    np.testing.assert_allclose(table["Step-function selection model"][1], 0.032882556576, rtol=1e-6)
+    np.testing.assert_allclose(table["Precision-effect estimate (PET–PEESE)"][1], 0.0676288524687, rtol=1e-9)
+    np.testing.assert_allclose(table["Adequately powered estimates only"][1], 0.0780937377842, rtol=1e-9)
+    assert "The tests disagree, and that is the finding" in found["reading"]
+    assert "step-function selection model see signs" in found["reading"]
+    assert found["flags"] == []
+
+
+def test_lopsidedness_warns_of_few_studies_and_of_dependence() -> None:
+    found = finding("lopsided", evidence(*data_set("eight_schools"), [1, 1, 2, 3, 4, 5, 6, 7]))
+    assert "None of" in found["reading"]
+    assert any("little power" in flag for flag in found["flags"])
+    assert any("as independent" in flag for flag in found["flags"])

@@ -109,12 +109,13 @@ def test_many_estimates_are_drawn_as_one_line_a_paper(look):
 def test_what_was_worked_out_beside_the_answer_is_told_and_tabled(answered, look):
     answer = _answer(answered)
     shown = page(look(answered.access, "question", "messages"))
-    influence, dependence = answer.result["further"]
+    influence, dependence, lopsided = answer.result["further"]
     words = shown.one("main").words
     assert influence["title"] in words
     assert influence["reading"] in words
     assert dependence["reason"] in words
-    *_, table = [details.table() for details in shown.every("details", class_="data")]
+    assert lopsided["reading"] in words
+    _, _, table, _ = [details.table() for details in shown.every("details", class_="data")]
     measure, show = measure_of(answer), shown_by(answer)
     assert [row[0] for row in table[1:]] == [row[0] for row in influence["rows"]]
     assert [row[2] for row in table[1:]] == [measure.write_bare(show(row[2])) for row in influence["rows"]]
